@@ -1,0 +1,85 @@
+using FlowSolver.Foundation;
+using FlowSolver.Problems;
+using FlowSolver.Schemes;
+
+namespace FlowSolver.Ensembles;
+
+/// <summary>What a sampler is; the catalogue, tables and page read it.</summary>
+/// <param name="Name">The name in a case file, such as <c>proximal-ula</c>.</param>
+/// <param name="Summary">One sentence for the reader.</param>
+/// <param name="Law">The scheme that advances the sampler's law on the grid; null where there is none, and then step bias cannot be told apart.</param>
+/// <param name="WeakOrder">Order of its bias in τ on smooth problems; null where it has none.</param>
+/// <param name="Source">Published source.</param>
+public sealed record SamplerTraits(string Name, string Summary, FlowScheme? Law, int? WeakOrder, string Source);
+
+/// <summary>What one step of an ensemble did.</summary>
+/// <param name="Failure">One sentence when the walkers cannot be used any more (blow-up); null otherwise.</param>
+/// <param name="Warning">One sentence when something should be known though the step stands; null otherwise.</param>
+/// <param name="AcceptanceRate">Share of proposals accepted, for Metropolis-adjusted samplers; null elsewhere.</param>
+public readonly record struct EnsembleReport(string? Failure = null, string? Warning = null, double? AcceptanceRate = null);
+
+/// <summary>A way to advance walkers: a small immutable object with its options. See <see cref="SamplerCatalogue"/> for how one is found.</summary>
+public abstract class Sampler
+{
+    /// <summary>What the sampler is.</summary>
+    public abstract SamplerTraits Traits { get; }
+
+    /// <summary>Starts a run of walkers drawn from the problem's start.</summary>
+    /// <param name="problem">The problem.</param>
+    /// <param name="walkers">Number of walkers, at least 1.</param>
+    /// <param name="seed">Seed: the same seed gives the same walkers at any number of threads.</param>
+    /// <param name="team">Threads to use.</param>
+    public abstract EnsembleRun Begin(Problem problem, int walkers, ulong seed, WorkerTeam team);
+}
+
+/// <summary>Walkers on their way through time under one sampler. Not safe for use from two threads at once.</summary>
+public abstract class EnsembleRun
+{
+    /// <summary>Keeps the problem and allocates the walkers.</summary>
+    protected EnsembleRun(Problem problem, int walkers, WorkerTeam team)
+    {
+        ArgumentNullException.ThrowIfNull(problem);
+        ArgumentNullException.ThrowIfNull(team);
+        Problem = problem;
+        Team = team;
+        WalkersX = new double[Require.AtLeast(walkers, 1)];
+        WalkersY = problem.Dimension == 2 ? new double[walkers] : [];
+    }
+
+    /// <summary>The problem.</summary>
+    public Problem Problem { get; }
+
+    /// <summary>Time reached.</summary>
+    public double Time { get; private set; }
+
+    /// <summary>Steps taken.</summary>
+    public int StepsTaken { get; private set; }
+
+    /// <summary>First coordinates of the walkers now.</summary>
+    public ReadOnlySpan<double> X => WalkersX;
+
+    /// <summary>Second coordinates; empty in one dimension.</summary>
+    public ReadOnlySpan<double> Y => WalkersY;
+
+    /// <summary>First coordinates, for the sampler to write.</summary>
+    protected double[] WalkersX { get; }
+
+    /// <summary>Second coordinates, for the sampler to write.</summary>
+    protected double[] WalkersY { get; }
+
+    /// <summary>The threads.</summary>
+    protected WorkerTeam Team { get; }
+
+    /// <summary>Takes one step.</summary>
+    /// <exception cref="ArgumentOutOfRangeException"><paramref name="step"/> is not finite and above 0.</exception>
+    public EnsembleReport Advance(double step)
+    {
+        var report = AdvanceCore(Require.Positive(step));
+        Time += step;
+        StepsTaken++;
+        return report;
+    }
+
+    /// <summary>Takes the step; the base keeps time and count. Allocates nothing.</summary>
+    protected abstract EnsembleReport AdvanceCore(double step);
+}
