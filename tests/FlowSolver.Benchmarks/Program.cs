@@ -1,3 +1,14 @@
 using BenchmarkDotNet.Running;
+using FlowSolver.Benchmarks;
 
-BenchmarkSwitcher.FromAssembly(typeof(Program).Assembly).Run(args);
+// "peers" and "growth" need no BenchmarkDotNet: they measure ratios in one run. Anything else is handed to it.
+switch (args)
+{
+    case ["peers", .. var names]:
+        return PeerComparison.RunPeers(names);
+    case ["growth", .. var names]:
+        return PeerComparison.RunGrowth(names);
+    default:
+        BenchmarkSwitcher.FromAssembly(typeof(Program).Assembly).Run(args);
+        return 0;
+}

@@ -1,0 +1,16 @@
+namespace FlowSolver.Benchmarks;
+
+/// <summary>
+/// What <c>-- peers</c> and <c>-- growth</c> run. To add a comparison: keep its row as a static member of the benchmark class that owns the
+/// work, add the script to <c>peers/</c>, and name the row here.
+/// </summary>
+internal static class PeerRows
+{
+    public static IReadOnlyList<PeerRow> Peers { get; } =
+    [
+    ];
+
+    public static IReadOnlyList<GrowthRow> Growth { get; } =
+    [
+    ];
+}
