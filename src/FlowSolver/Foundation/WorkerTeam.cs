@@ -12,15 +12,19 @@ namespace FlowSolver.Foundation;
 /// </remarks>
 public sealed class WorkerTeam : IDisposable
 {
-    private const int SpinsBeforeSleep = 2000;
+    private const int SpinsBeforeSleep = 200;
+    private const int Running = 0;
+    private const int Finished = 1;
+    private const int Awaited = 2;
     private readonly Thread[] threads;
     private readonly SemaphoreSlim wake = new(0);
-    private readonly ManualResetEventSlim finished = new(true, SpinsBeforeSleep);
+    private readonly AutoResetEvent finished = new(false);
     private readonly Lock gate = new();
     private Action<int>? job;
     private int blockCount;
     private int nextBlock;
     private int helpersAtWork;
+    private int phase;
     private ExceptionDispatchInfo? failure;
     private volatile bool stopping;
     [ThreadStatic] private static bool insideBlock;
@@ -70,10 +74,10 @@ public sealed class WorkerTeam : IDisposable
             nextBlock = 0;
             failure = null;
             helpersAtWork = helpers;
-            finished.Reset();
+            Volatile.Write(ref phase, Running);
             wake.Release(helpers);
             TakeBlocks();
-            finished.Wait();
+            AwaitHelpers();
             job = null;
             failure?.Throw();
         }
@@ -104,9 +108,23 @@ public sealed class WorkerTeam : IDisposable
             if (stopping)
                 return;
             TakeBlocks();
-            if (Interlocked.Decrement(ref helpersAtWork) == 0)
+            if (Interlocked.Decrement(ref helpersAtWork) == 0 && Interlocked.Exchange(ref phase, Finished) == Awaited)
                 finished.Set();
         }
+    }
+
+    // A plain event behind a short spin: the slim kinds allocate when they are first waited on.
+    private void AwaitHelpers()
+    {
+        for (var spin = 0; spin < SpinsBeforeSleep; spin++)
+        {
+            if (Volatile.Read(ref phase) == Finished)
+                return;
+            Thread.SpinWait(20);
+        }
+
+        if (Interlocked.CompareExchange(ref phase, Awaited, Running) == Running)
+            finished.WaitOne();
     }
 
     private void TakeBlocks()
