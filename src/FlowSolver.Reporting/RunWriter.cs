@@ -1,0 +1,50 @@
+using FlowSolver.Reporting.Archives;
+using FlowSolver.Reporting.Tables;
+using FlowSolver.Studies;
+
+namespace FlowSolver.Reporting;
+
+/// <summary>What was written.</summary>
+/// <param name="Files">Paths of all files, in the order of writing.</param>
+/// <param name="Problems">Outputs that this machine could not make (such as pictures without a font library), one sentence each.</param>
+public sealed record WrittenRun(IReadOnlyList<string> Files, IReadOnlyList<string> Problems);
+
+/// <summary>Everything that a run leaves: tables, densities, figures, <c>run.json</c> and the page.</summary>
+public static class RunWriter
+{
+    /// <summary>
+    /// Writes all files into a folder, which must exist. The caller sees to it that a half-written folder never looks whole, by writing into a
+    /// sibling and renaming it.
+    /// </summary>
+    /// <param name="result">What the run found.</param>
+    /// <param name="labels">Units for axes and headings.</param>
+    /// <param name="provenance">Where it came from.</param>
+    /// <param name="directory">The folder.</param>
+    /// <param name="maps">2-D transport maps to draw; none by default.</param>
+    /// <param name="cancellation">Checked between files and inside the long ones.</param>
+    /// <exception cref="ArgumentException">A number in the records is NaN or infinite.</exception>
+    /// <exception cref="OperationCanceledException">Cancelled; the folder then holds a part.</exception>
+    public static WrittenRun WriteAll(
+        ComparisonResult result, CaseLabels labels, RunProvenance provenance, string directory,
+        IReadOnlyList<TransportPicture>? maps = null, CancellationToken cancellation = default)
+    {
+        ArgumentNullException.ThrowIfNull(result);
+        ArgumentNullException.ThrowIfNull(labels);
+        ArgumentNullException.ThrowIfNull(provenance);
+        ArgumentNullException.ThrowIfNull(directory);
+        var files = new List<string>();
+        var problems = new List<string>();
+        foreach (var table in (Table[])[RunTables.Series(result, labels), RunTables.Steps(result, labels), RunTables.Budget(result, labels)])
+        {
+            cancellation.ThrowIfCancellationRequested();
+            files.Add(TableWriter.WriteCsv(table, directory));
+        }
+
+        if (result.Grid.Dimension == 1)
+            files.Add(RunTables.WriteDensityCsv(result, directory, cancellation));
+        files.Add(DensityArchive.Write(result, directory, cancellation));
+        cancellation.ThrowIfCancellationRequested();
+        files.Add(RunRecord.Write(result, labels, provenance, directory, problems));
+        return new WrittenRun(files, problems);
+    }
+}
