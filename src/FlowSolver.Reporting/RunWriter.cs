@@ -1,4 +1,5 @@
 using FlowSolver.Reporting.Archives;
+using FlowSolver.Reporting.Figures;
 using FlowSolver.Reporting.Tables;
 using FlowSolver.Studies;
 
@@ -21,12 +22,14 @@ public static class RunWriter
     /// <param name="provenance">Where it came from.</param>
     /// <param name="directory">The folder.</param>
     /// <param name="maps">2-D transport maps to draw; none by default.</param>
+    /// <param name="style">Looks of the figures; null takes the default.</param>
+    /// <param name="formats">Formats of the figures.</param>
     /// <param name="cancellation">Checked between files and inside the long ones.</param>
     /// <exception cref="ArgumentException">A number in the records is NaN or infinite.</exception>
     /// <exception cref="OperationCanceledException">Cancelled; the folder then holds a part.</exception>
     public static WrittenRun WriteAll(
         ComparisonResult result, CaseLabels labels, RunProvenance provenance, string directory,
-        IReadOnlyList<TransportPicture>? maps = null, CancellationToken cancellation = default)
+        IReadOnlyList<TransportPicture>? maps = null, FigureStyle? style = null, FigureFormats formats = FigureFormats.All, CancellationToken cancellation = default)
     {
         ArgumentNullException.ThrowIfNull(result);
         ArgumentNullException.ThrowIfNull(labels);
@@ -43,6 +46,18 @@ public static class RunWriter
         if (result.Grid.Dimension == 1)
             files.Add(RunTables.WriteDensityCsv(result, directory, cancellation));
         files.Add(DensityArchive.Write(result, directory, cancellation));
+        using (var figures = new FigureWriter(style))
+        {
+            foreach (var figure in RunFigures.All(result, labels, maps, style))
+            {
+                cancellation.ThrowIfCancellationRequested();
+                files.AddRange(figures.Write(figure, Path.Combine(directory, "figures"), formats));
+            }
+
+            if (figures.Problem is not null)
+                problems.Add(figures.Problem);
+        }
+
         cancellation.ThrowIfCancellationRequested();
         files.Add(RunRecord.Write(result, labels, provenance, directory, problems));
         return new WrittenRun(files, problems);

@@ -57,7 +57,7 @@ internal static class SampleRuns
 
         var times = plane.Plan.ReportTimes;
         return new TransportPicture(
-            FormattableString.Invariant($"exact flow, t = {times[fromReport]} to t = {times[toReport]}"), "exact", times[fromReport], times[toReport],
+            FormattableString.Invariant($"exact flow, t = {Numbers.Short(times[fromReport])} to t = {Numbers.Short(times[toReport])}"), "exact", times[fromReport], times[toReport],
             plane.Densities[0].Densities[fromReport], dx, dy);
     }
 
