@@ -1,3 +1,5 @@
+using FlowSolver.Schemes.ExactFlow;
+
 namespace FlowSolver.Schemes;
 
 /// <summary>Every scheme by its name in a case file. One row a scheme.</summary>
@@ -5,6 +7,7 @@ public static class SchemeCatalogue
 {
     private static readonly FlowScheme[] Rows =
     [
+        new ExactFlowScheme(),
     ];
 
     /// <summary>All schemes, in the order in which tables and figures show them.</summary>
