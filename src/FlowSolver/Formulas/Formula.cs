@@ -33,8 +33,9 @@ public sealed class Formula
     private readonly Lazy<FormulaKernel> kernel;
     private readonly Lazy<PolynomialStructure> structure;
 
-    private Formula(string text, int dimension, FormulaGraph graph, FormulaNode root)
+    private Formula(string text, int dimension, FormulaGraph graph, FormulaNode root, IReadOnlySet<string> constants)
     {
+        Constants = constants;
         Text = text;
         Dimension = dimension;
         this.graph = graph;
@@ -62,8 +63,9 @@ public sealed class Formula
         }
 
         var graph = new FormulaGraph();
-        var root = FormulaParser.Parse(text, dimension, constants, graph);
-        return new Formula(text, dimension, graph, root);
+        var used = new HashSet<string>();
+        var root = FormulaParser.Parse(text, dimension, constants, graph, used);
+        return new Formula(text, dimension, graph, root, used);
     }
 
     /// <summary>The formula as written.</summary>
@@ -71,6 +73,9 @@ public sealed class Formula
 
     /// <summary>1 or 2.</summary>
     public int Dimension { get; }
+
+    /// <summary>Names of the constants that the text calls.</summary>
+    public IReadOnlySet<string> Constants { get; }
 
     /// <summary>
     /// Whether nothing in it switches (abs, min, max, sign, step) once it is simplified. Where this is false the formula may still be smooth, but that
@@ -101,7 +106,7 @@ public sealed class Formula
     /// The exact derivative by a variable, as a formula of its own. At a kink it is that of one side; the jumps of step and sign do not count.
     /// </summary>
     public Formula Derivative(FormulaVariable variable)
-        => new($"d/d{(variable == FormulaVariable.X ? "x" : "y")} [{Text}]", Dimension, graph, DerivativeNode(Root, variable == FormulaVariable.Y));
+        => new($"d/d{(variable == FormulaVariable.X ? "x" : "y")} [{Text}]", Dimension, graph, DerivativeNode(Root, variable == FormulaVariable.Y), Constants);
 
     /// <summary>Its value when it is a constant; null otherwise.</summary>
     public double? AsConstant() => Root.IsNumber ? Root.Value : structure.Value.Quadratic is { GradientX: 0, GradientY: 0, HessianXX: 0, HessianXY: 0, HessianYY: 0 } constant ? constant.Constant : null;

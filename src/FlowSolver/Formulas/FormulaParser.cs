@@ -22,19 +22,26 @@ internal sealed class FormulaParser
     private readonly int dimension;
     private readonly IReadOnlyDictionary<string, double> constants;
     private readonly FormulaGraph graph;
+    private readonly HashSet<string> used;
     private int position;
     private int depth;
 
-    private FormulaParser(string text, int dimension, IReadOnlyDictionary<string, double> constants, FormulaGraph graph)
+    private FormulaParser(string text, int dimension, IReadOnlyDictionary<string, double> constants, FormulaGraph graph, HashSet<string> used)
     {
+        this.used = used;
         this.text = text;
         this.dimension = dimension;
         this.constants = constants;
         this.graph = graph;
     }
 
+    /// <param name="text">The formula.</param>
+    /// <param name="dimension">1 or 2.</param>
+    /// <param name="constants">Names with values.</param>
+    /// <param name="graph">Receives the nodes.</param>
+    /// <param name="used">Receives the names of the constants that occur.</param>
     /// <exception cref="InputException">The text is not a formula.</exception>
-    public static FormulaNode Parse(string text, int dimension, IReadOnlyDictionary<string, double> constants, FormulaGraph graph)
+    public static FormulaNode Parse(string text, int dimension, IReadOnlyDictionary<string, double> constants, FormulaGraph graph, HashSet<string> used)
     {
         if (text.Length > FormulaLanguage.LongestText)
         {
@@ -43,7 +50,7 @@ internal sealed class FormulaParser
                 "Shorten it, for example with constants."));
         }
 
-        var parser = new FormulaParser(text, dimension, constants, graph);
+        var parser = new FormulaParser(text, dimension, constants, graph, used);
         parser.SkipSpace();
         if (parser.position == text.Length)
             throw parser.Fault(0, "The formula was empty; it must be an expression such as x^2/2.");
@@ -194,24 +201,26 @@ internal sealed class FormulaParser
             return Call(function, start);
         }
 
-        FormulaNode node;
-        if (name == "x")
-            node = graph.X;
-        else if (name == "y")
-            node = dimension == 2
-                ? graph.Y
-                : throw Fault(start, "The variable y was used in one dimension; only x may be used.", "Give the domain a y axis, or remove y.");
-        else if (name == "pi")
-            node = graph.Number(Math.PI);
-        else if (name == "e")
-            node = graph.Number(Math.E);
-        else if (constants.TryGetValue(name, out var value))
-            node = graph.Number(value);
-        else
-            throw Unknown(name, start, isCall);
+        var node = name switch
+        {
+            "x" => graph.X,
+            "y" when dimension == 2 => graph.Y,
+            "y" => throw Fault(start, "The variable y was used in one dimension; only x may be used.", "Give the domain a y axis, or remove y."),
+            "pi" => graph.Number(Math.PI),
+            "e" => graph.Number(Math.E),
+            _ => Constant(name) ?? throw Unknown(name, start, isCall),
+        };
         if (isCall)
             throw Fault(start, $"{name} is not a function, yet a parenthesis follows it; a product must be written with *, as in {name}*(x).");
         return node;
+    }
+
+    private FormulaNode? Constant(string name)
+    {
+        if (!constants.TryGetValue(name, out var value))
+            return null;
+        used.Add(name);
+        return graph.Number(value);
     }
 
     private FormulaNode Call(FormulaLanguage.FunctionEntry function, int start)
