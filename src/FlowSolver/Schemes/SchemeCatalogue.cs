@@ -1,4 +1,5 @@
 using FlowSolver.Schemes.ExactFlow;
+using FlowSolver.Schemes.Jko;
 
 namespace FlowSolver.Schemes;
 
@@ -8,6 +9,7 @@ public static class SchemeCatalogue
     private static readonly FlowScheme[] Rows =
     [
         new ExactFlowScheme(),
+        new JkoScheme(),
     ];
 
     /// <summary>All schemes, in the order in which tables and figures show them.</summary>
