@@ -98,12 +98,6 @@ internal sealed class JkoPlaneRun : FlowRun
         (equation.Previous, nextSpline) = (nextSpline, equation.Previous);
         (before, current, next) = (current, next, before);
         lastStep = step;
-        if (newton.Trace is not null)
-        {
-            double Lo(double[] a) { var m = 1e300; for (var j = 0; j < equation.Plane.Ny; j++) for (var i = 0; i < equation.Plane.Nx; i++) m = Math.Min(m, a[equation.Plane.Row(j) + i]); return m; }
-            double Hi(double[] a) { var m = -1e300; for (var j = 0; j < equation.Plane.Ny; j++) for (var i = 0; i < equation.Plane.Nx; i++) m = Math.Max(m, a[equation.Plane.Row(j) + i]); return m; }
-            newton.Trace($"range old {Lo(before):g4} {Hi(before):g4} linear {Lo(equation.Linear):g4} {Hi(equation.Linear):g4} new {Lo(current):g4} {Hi(current):g4}");
-        }
         newton.Trace?.Invoke($"  proof {proof} relative {gap:g4} normaliser {normaliser:g9} tail attempt {attempt}");
         return new StepReport(products, solve.Residual.Weighted, gap, proof.Distance,
             Failure(solve, gap, tolerance), Warning(attempt));
