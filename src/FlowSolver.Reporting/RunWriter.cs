@@ -1,5 +1,6 @@
 using FlowSolver.Reporting.Archives;
 using FlowSolver.Reporting.Figures;
+using FlowSolver.Reporting.Page;
 using FlowSolver.Reporting.Tables;
 using FlowSolver.Studies;
 
@@ -60,6 +61,8 @@ public static class RunWriter
 
         cancellation.ThrowIfCancellationRequested();
         files.Add(RunRecord.Write(result, labels, provenance, directory, problems));
+        cancellation.ThrowIfCancellationRequested();
+        files.Add(PageWriter.Write(RunPage.Model(result, labels, provenance, maps, style, problems), directory));
         return new WrittenRun(files, problems);
     }
 }

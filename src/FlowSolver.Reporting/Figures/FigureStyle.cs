@@ -108,6 +108,9 @@ public sealed record FigureStyle
     /// <summary>Colours of a density map from none to the greatest density: lightness falls all the way, so that it can be read in grey.</summary>
     public IReadOnlyList<string> MapColors { get; init; } = ["#fbfaf7", "#d6e3ee", "#9dc3de", "#5a97c6", "#27659f", "#0c2f5c"];
 
+    /// <summary>The same on a dark page: lightness rises all the way.</summary>
+    public IReadOnlyList<string> MapColorsDark { get; init; } = ["#15191e", "#1c3652", "#27608f", "#4a93c9", "#93c6ea", "#f1f8fe"];
+
     /// <summary>Colour of walkers over a map.</summary>
     public string WalkerColor { get; init; } = "#e07a00";
 

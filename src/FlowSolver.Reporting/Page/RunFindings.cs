@@ -1,0 +1,193 @@
+using System.Globalization;
+using FlowSolver.Reporting.Tables;
+using FlowSolver.Studies;
+
+namespace FlowSolver.Reporting.Page;
+
+/// <summary>What a run says about one method: picked from the records, nothing computed beyond ratios for reading.</summary>
+/// <param name="Method">Scheme or sampler.</param>
+/// <param name="Kind">Density or ensemble.</param>
+/// <param name="Worst">The row with the largest distance to the exact flow after the start; null where there is no distance.</param>
+/// <param name="Last">The last row.</param>
+/// <param name="Budget">The error budget at the time of <paramref name="Worst"/>; null for flow methods.</param>
+/// <param name="Grid">The yardstick's own error at that time.</param>
+/// <param name="IsOff">Whether the distance is more than grid and noise explain.</param>
+/// <param name="IsFailed">Whether the method failed.</param>
+/// <param name="Cause">Why, in a few words.</param>
+/// <param name="Sentence">All of it as one or two sentences.</param>
+public sealed record MethodFinding(
+    string Method, SeriesKind Kind, SeriesRow? Worst, SeriesRow Last, BudgetRow? Budget, double? Grid, bool IsOff, bool IsFailed, string Cause, string Sentence);
+
+/// <summary>Reads a run's records for the verdict: which method is off, by how much, and why.</summary>
+public static class RunFindings
+{
+    // A flow method within this factor of the yardstick's own error is not called off: the estimate of that error is itself an estimate.
+    private const double GridFactor = 2;
+
+    // An ensemble is called off when more than this share of its times is; a few of many are to be expected by chance.
+    private const double OffShare = 0.2;
+
+    /// <summary>One finding a method but the yardstick, the largest distance first; failures before all.</summary>
+    public static IReadOnlyList<MethodFinding> Of(ComparisonResult result, CaseLabels labels)
+    {
+        ArgumentNullException.ThrowIfNull(result);
+        ArgumentNullException.ThrowIfNull(labels);
+        var findings = new List<MethodFinding>();
+        foreach (var group in result.Series.GroupBy(row => row.Method).Where(group => group.Key != "exact"))
+        {
+            var rows = group.ToList();
+            var failure = result.Remarks.FirstOrDefault(remark => remark.IsFailure && remark.Method == group.Key);
+            var worst = rows.Where(row => row.Time > 0 && row.DistanceToExact is not null).MaxBy(row => row.DistanceToExact!.Value.Distance);
+            var finding = rows[0].Kind == SeriesKind.Flow ? OfFlow(result, labels, rows, worst) : OfSampler(result, labels, rows, worst);
+            findings.Add(failure is null ? finding : finding with
+            {
+                IsFailed = true,
+                Sentence = $"{group.Key} failed{(failure.Time is { } time ? " at t = " + Time(time, labels) : "")}: {failure.Text} {finding.Sentence}",
+            });
+        }
+
+        return [.. findings.OrderByDescending(finding => finding.IsFailed).ThenByDescending(finding => finding.IsOff).ThenByDescending(finding => finding.Worst?.DistanceToExact?.Distance ?? 0)];
+    }
+
+    /// <summary>The verdict of a run.</summary>
+    public static Verdict Verdict(ComparisonResult result, CaseLabels labels)
+    {
+        var findings = Of(result, labels);
+        var reasons = findings.Select(finding => finding.Sentence).ToList();
+        var failed = findings.Where(finding => finding.IsFailed).Select(finding => finding.Method).ToList();
+        foreach (var remark in result.Remarks.Where(remark => remark.IsFailure && (remark.Method is null || !failed.Contains(remark.Method))))
+            reasons.Insert(0, remark.Text);
+        if (result.Interrupted)
+            return new Verdict(VerdictTone.Failed, "The run was interrupted. What is shown had been finished before.", reasons);
+        if (result.HasFailures)
+        {
+            return new Verdict(VerdictTone.Failed, failed.Count == 0
+                ? "Part of the run could not be trusted."
+                : Listed(failed) + (failed.Count == 1 ? " could not be trusted to the end." : " could not be trusted to the end.") + " The rest stands.", reasons);
+        }
+
+        var off = findings.Where(finding => finding.IsOff).ToList();
+        if (findings.Count == 0)
+            return new Verdict(VerdictTone.Sound, "The exact flow was computed; there was nothing to compare it with.", reasons);
+        if (off.Count == 0)
+            return new Verdict(VerdictTone.Sound, "No method differs from the exact flow by more than grid error and noise explain.", reasons);
+        var first = off[0];
+        var headline = string.Create(CultureInfo.InvariantCulture,
+            $"{first.Method} is furthest off: {Length(first.Worst!.DistanceToExact!.Value.Distance, labels)} from the exact flow at t = {Time(first.Worst.Time, labels)}{Share(result, first.Worst)}, {first.Cause}.");
+        var fine = findings.Where(finding => !finding.IsOff).Select(finding => finding.Method).ToList();
+        if (fine.Count > 0)
+            headline += " " + Listed(fine) + (fine.Count == 1 ? " agrees" : " agree") + " with it to within grid error and noise.";
+        else if (off.Count > 1)
+            headline += " All " + off.Count.ToString(CultureInfo.InvariantCulture) + " methods are off by more than grid error and noise.";
+        return new Verdict(VerdictTone.Attention, headline, reasons);
+    }
+
+    /// <summary>The findings as a table.</summary>
+    public static Table Summary(ComparisonResult result, CaseLabels labels)
+    {
+        ArgumentNullException.ThrowIfNull(labels);
+        var rows = Of(result, labels).Select(finding => (IReadOnlyList<Cell>)
+        [
+            finding.Method,
+            RunTables.Kind(finding.Kind),
+            finding.Worst?.DistanceToExact?.Distance,
+            finding.Worst?.Time,
+            finding.Last.DistanceToExact?.Distance,
+            finding.Kind == SeriesKind.Flow ? finding.Worst?.DistanceToExact?.Distance : finding.Budget?.StepBias,
+            finding.Budget?.Noise95,
+            finding.Grid,
+            finding.IsFailed ? "failed" : finding.IsOff ? "off, " + finding.Cause : finding.Cause,
+        ]).ToList();
+        return new Table(
+            "findings",
+            [
+                new("method"), new("kind"), new("w2_exact", "largest W2 to exact", labels.Length), new("time", "at t", labels.Time), new("w2_exact_last", "W2 at the end", labels.Length),
+                new("step_bias_w2", "of which step", labels.Length), new("noise_w2_p95", "noise, 95 %", labels.Length), new("grid_w2", "grid", labels.Length), new("verdict"),
+            ], rows);
+    }
+
+    private static MethodFinding OfFlow(ComparisonResult result, CaseLabels labels, List<SeriesRow> rows, SeriesRow? worst)
+    {
+        var method = rows[0].Method;
+        if (worst?.DistanceToExact is not { } distance)
+            return new MethodFinding(method, SeriesKind.Flow, null, rows[^1], null, null, false, false, "no distance was computed", $"{method}: no distance to the exact flow was computed.");
+        var grid = GridAt(result, worst.Time);
+        var isOff = grid is null ? distance.Low > 0 : distance.Low > GridFactor * grid;
+        var cause = isOff ? "by its time step" : "within the grid's own error";
+        var against = grid is { } error
+            ? isOff && error > 0
+                ? $", {Numbers.Short(distance.Distance / error, 2)} times the grid error of the exact flow ({Length(error, labels)}): the time step is the cause"
+                : $"; the exact flow itself is known to {Length(error, labels)} (grid error), so no difference is shown"
+            : "; the exact flow has no error estimate here";
+        return new MethodFinding(
+            method, SeriesKind.Flow, worst, rows[^1], null, grid, isOff, false, cause,
+            $"{method}: at most {Length(distance.Distance, labels)} from the exact flow, at t = {Time(worst.Time, labels)}{against}. At the end: {Length(rows[^1].DistanceToExact?.Distance ?? distance.Distance, labels)}.");
+    }
+
+    private static MethodFinding OfSampler(ComparisonResult result, CaseLabels labels, List<SeriesRow> rows, SeriesRow? worst)
+    {
+        var method = rows[0].Method;
+        var budget = result.Budget.Where(row => row.Sampler == method && row.Time > 0).ToList();
+        var peak = worst is not null ? budget.FirstOrDefault(row => row.Time == worst.Time) : budget.MaxBy(row => row.Total ?? 0);
+        if (peak is null)
+        {
+            var sentence = worst?.DistanceToExact is { } known
+                ? $"{method}: at most {Length(known.Distance, labels)} from the exact flow, at t = {Time(worst.Time, labels)}. No error budget was computed."
+                : $"{method}: no distance to the exact flow was computed.";
+            return new MethodFinding(method, SeriesKind.Ensemble, worst, rows[^1], null, null, false, false, "no error budget", sentence);
+        }
+
+        var quiet = budget.Count(IsWithinNoise);
+        var isOff = budget.Count - quiet > OffShare * budget.Count;
+        var byStep = peak.StepBias is { } bias && bias >= (peak.NoiseMean ?? 0);
+        var cause = !isOff ? "within noise" : byStep ? "by the bias of its step" : peak.Verdict;
+        var parts = new List<string>();
+        if (peak.StepBias is { } step)
+            parts.Add($"the bias of its step is {Length(step, labels)}");
+        if (peak.Noise95 is { } noise)
+            parts.Add($"noise of {result.WalkerCount.ToString(CultureInfo.InvariantCulture)} walkers reaches {Length(noise, labels)} (95 %)");
+        if (peak.GridError is { } grid)
+            parts.Add($"the grid adds {Length(grid, labels)}");
+        var total = peak.Total ?? worst?.DistanceToExact?.Distance;
+        return new MethodFinding(
+            method, SeriesKind.Ensemble, worst, rows[^1], peak, peak.GridError, isOff, false, cause,
+            $"{method}: {(total is { } value ? $"at most {Length(value, labels)} from the exact flow, at t = {Time(peak.Time, labels)}" : "no distance to the exact flow")}"
+            + (parts.Count > 0 ? "; there " + Listed(parts) : "")
+            + $". {(quiet == budget.Count ? "Within noise at all" : $"Within noise at {quiet} of")} {budget.Count} report times after the start.");
+    }
+
+    private static bool IsWithinNoise(BudgetRow row) => row.Verdict.StartsWith("within noise", StringComparison.Ordinal);
+
+    private static double? GridAt(ComparisonResult result, double time)
+    {
+        for (var i = 0; i < Math.Min(result.GridErrors.Count, result.Plan.ReportTimes.Count); i++)
+        {
+            if (result.Plan.ReportTimes[i] == time)
+                return result.GridErrors[i];
+        }
+
+        return null;
+    }
+
+    // The distance against the width of the density: a number that means something without knowing the case.
+    private static string Share(ComparisonResult result, SeriesRow row)
+    {
+        var exact = result.Series.FirstOrDefault(other => other.Method == "exact" && other.Time == row.Time);
+        if (exact is null || row.DistanceToExact is not { } distance)
+            return "";
+        var width = Math.Sqrt(exact.Moments.VarianceX + (result.Grid.Dimension == 2 ? exact.Moments.VarianceY : 0));
+        return width > 0 ? $" ({Numbers.Short(100 * distance.Distance / width, 2)} % of the density's standard deviation)" : "";
+    }
+
+    // Three digits in prose; tables and readouts carry more.
+    internal static string Length(double value, CaseLabels labels) => Numbers.Short(value, 3) + (labels.Length is null ? "" : " " + labels.Length);
+
+    internal static string Time(double value, CaseLabels labels) => Numbers.Short(value) + (labels.Time is null ? "" : " " + labels.Time);
+
+    internal static string Listed(IReadOnlyList<string> names) => names.Count switch
+    {
+        0 => "",
+        1 => names[0],
+        _ => string.Join(", ", names.Take(names.Count - 1)) + " and " + names[^1],
+    };
+}

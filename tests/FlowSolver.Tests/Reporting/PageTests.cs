@@ -1,0 +1,160 @@
+using System.Globalization;
+using System.Text.Json.Nodes;
+using System.Text.RegularExpressions;
+using FlowSolver.Reporting;
+using FlowSolver.Reporting.Page;
+using FlowSolver.Studies;
+
+namespace FlowSolver.Tests.Reporting;
+
+public sealed class PageTests : IDisposable
+{
+    private readonly string directory = Directory.CreateTempSubdirectory("flowsolver-page").FullName;
+
+    public void Dispose() => Directory.Delete(directory, recursive: true);
+
+    private static string Html(int dimension)
+    {
+        var result = dimension == 1 ? SampleRuns.Line() : SampleRuns.Plane();
+        var maps = dimension == 1 ? null : new[] { SampleRuns.Map(result, 0, 3) };
+        return PageWriter.Html(RunPage.Model(result, SampleRuns.Labels, SampleRuns.Provenance, maps));
+    }
+
+    private static JsonNode Data(string html)
+        => JsonNode.Parse(Regex.Match(html, "<script type=\"application/json\" id=\"data\">(.*?)</script>", RegexOptions.Singleline).Groups[1].Value)!;
+
+    [Theory]
+    [InlineData(1)]
+    [InlineData(2)]
+    public void Html_NeedsNothingFromOutside(int dimension)
+    {
+        var html = Html(dimension);
+        if (Environment.GetEnvironmentVariable("FLOWSOLVER_FIGURES") is { } kept)
+            File.WriteAllText(Path.Combine(Directory.CreateDirectory(kept).FullName, $"page{dimension}.html"), html);
+        // Names of XML namespaces and the library's own comment are not addresses that are asked for.
+        var addresses = Regex.Matches(html, "(?:https?:)?//[a-z0-9][a-z0-9.-]*\\.[a-z]{2,}[^\"' )<]*", RegexOptions.IgnoreCase).Select(match => match.Value)
+            .Where(address => !address.StartsWith("http://www.w3.org/2000/svg", StringComparison.Ordinal) && address != "https://github.com/leeoniya/uPlot");
+        Assert.Empty(addresses);
+        Assert.DoesNotMatch("<(script|img|link|iframe)[^>]+(src|href)=\"(?!data:)", html);
+        Assert.DoesNotContain("@import", html, StringComparison.Ordinal);
+        Assert.Contains("default-src 'none'", html, StringComparison.Ordinal);
+        Assert.Contains("Permission is hereby granted", html, StringComparison.Ordinal);
+        Assert.True(html.Length < 5_000_000, $"The page had {html.Length} characters.");
+        Assert.DoesNotContain("{{", Regex.Replace(html, "<script.*?</script>|<style.*?</style>", "", RegexOptions.Singleline), StringComparison.Ordinal);
+    }
+
+    // Mutation tried: the budget of the page rounded to 6 digits; fails.
+    [Theory]
+    [InlineData(1)]
+    [InlineData(2)]
+    public void Data_CarriesTheNumbersOfTheTables(int dimension)
+    {
+        var result = dimension == 1 ? SampleRuns.Line() : SampleRuns.Plane();
+        var explorer = Data(Html(dimension))["explorers"]!.AsObject().Single().Value!;
+        Assert.Equal(result.Plan.ReportTimes, explorer["times"]!.AsArray().Select(time => time!.GetValue<double>()));
+        Assert.Equal(
+            result.Series.Select(row => row.DistanceToExact?.Distance),
+            Column(explorer["series"]!, "w2_exact"));
+        Assert.Equal(result.Series.Select(row => row.FreeEnergy), Column(explorer["series"]!, "free_energy"));
+        Assert.Equal(result.Budget.Select(row => row.Total), Column(explorer["budget"]!, "total_w2"));
+
+        static IEnumerable<double?> Column(JsonNode table, string name)
+        {
+            var at = table["columns"]!.AsArray().Select(column => column!.GetValue<string>()).ToList().IndexOf(name);
+            return table["rows"]!.AsArray().Select(row => row![at]?.GetValue<double>());
+        }
+    }
+
+    [Fact]
+    public void Data_OfAPlane_HoldsEveryMapInSteps()
+    {
+        var result = SampleRuns.Plane();
+        var explorer = Data(Html(2))["explorers"]!.AsObject().Single().Value!;
+        var map = explorer["densities"]!["jko"]![3]!;
+        var bytes = Convert.FromBase64String(map["data"]!.GetValue<string>());
+        var values = result.Densities.Single(history => history.Method == "jko").Densities[3].Values;
+        var greatest = map["max"]!.GetValue<double>();
+        Assert.Equal(values.Max(), greatest);
+        for (var i = 0; i < values.Length; i++)
+            Assert.Equal(values[i], BitConverter.ToUInt16(bytes, 2 * i) / 65535.0 * greatest, greatest / 65535);
+    }
+
+    [Fact]
+    public void Explorer_OfALargeRun_ThinsAndSaysSo()
+    {
+        var result = SampleRuns.Line(2000, 101, 0.03);
+        var page = RunPage.Model(result, SampleRuns.Labels, SampleRuns.Provenance);
+        var rule = page.Sections.OfType<TextSection>().Single(section => section.Title == "Limits").Paragraphs[^1];
+        Assert.Equal("This page shows every 4th cell of the densities and 51 of 101 report times. Densities on this page carry 6 significant digits; density.csv holds everything.", rule);
+        var html = PageWriter.Html(page);
+        Assert.True(html.Length < 5_000_000);
+        var explorer = Data(html)["explorers"]!.AsObject().Single().Value!;
+        Assert.Equal(500, explorer["x"]!.AsArray().Count);
+        Assert.Equal(3.0, explorer["times"]!.AsArray()[^1]!.GetValue<double>());
+    }
+
+    [Fact]
+    public void Verdict_NamesTheFurthestMethodTheAmountAndTheCause()
+    {
+        var verdict = RunFindings.Verdict(SampleRuns.Line(), SampleRuns.Labels);
+        Assert.Equal(VerdictTone.Attention, verdict.Tone);
+        var worst = SampleRuns.Line().Series.Where(row => row.Method != "exact").MaxBy(row => row.DistanceToExact!.Value.Distance)!;
+        Assert.StartsWith($"{worst.Method} is furthest off: {Numbers.Short(worst.DistanceToExact!.Value.Distance, 3)} µm from the exact flow at t = {Numbers.Short(worst.Time)} s (", verdict.Headline, StringComparison.Ordinal);
+        Assert.Contains("by the bias of its step", verdict.Headline, StringComparison.Ordinal);
+        var jko = Assert.Single(verdict.Reasons, reason => reason.StartsWith("jko: ", StringComparison.Ordinal));
+        Assert.Contains("the time step is the cause", jko, StringComparison.Ordinal);
+    }
+
+    [Fact]
+    public void Verdict_WhenGridAndNoiseExplainEverything_IsSound()
+    {
+        var sample = SampleRuns.Line();
+        var quiet = sample with
+        {
+            GridErrors = [.. sample.GridErrors.Select(_ => (double?)1.0)],
+            Budget = [.. sample.Budget.Select(row => row with { Verdict = "within noise" })],
+        };
+        var verdict = RunFindings.Verdict(quiet, SampleRuns.Labels);
+        Assert.Equal(VerdictTone.Sound, verdict.Tone);
+        Assert.Equal("No method differs from the exact flow by more than grid error and noise explain.", verdict.Headline);
+    }
+
+    [Fact]
+    public void Verdict_OfAFailedOrInterruptedRun_SaysSoFirst()
+    {
+        var failed = SampleRuns.Line() with { Remarks = [new Remark("jko", 0.4, "The gap of a step was 0.01.", true)] };
+        var verdict = RunFindings.Verdict(failed, SampleRuns.Labels);
+        Assert.Equal(VerdictTone.Failed, verdict.Tone);
+        Assert.Equal("jko could not be trusted to the end. The rest stands.", verdict.Headline);
+        Assert.StartsWith("jko failed at t = 0.4 s: The gap of a step was 0.01.", verdict.Reasons[0], StringComparison.Ordinal);
+        Assert.Equal(VerdictTone.Failed, RunFindings.Verdict(SampleRuns.Line() with { Interrupted = true }, SampleRuns.Labels).Tone);
+    }
+
+    [Fact]
+    public void Html_EscapesWhatTheCaseSays()
+    {
+        var sample = SampleRuns.Line(40, 3);
+        var result = sample with { Problem = sample.Problem with { Title = "<b>\"bead\" & co</b></script>" } };
+        var html = PageWriter.Html(RunPage.Model(result, new CaseLabels("</script><i>"), SampleRuns.Provenance));
+        Assert.DoesNotContain("<b>\"bead\"", html, StringComparison.Ordinal);
+        Assert.DoesNotContain("</script><i>", html, StringComparison.Ordinal);
+        Assert.Contains("&lt;b&gt;&quot;bead&quot; &amp; co&lt;/b&gt;", html, StringComparison.Ordinal);
+        Assert.NotNull(Data(html));
+    }
+
+    [Fact]
+    public void Html_GivesEveryNumberOfATableItsExactValue()
+    {
+        var html = Html(1);
+        var total = SampleRuns.Line().Budget[5].Total!.Value;
+        Assert.Contains(string.Create(CultureInfo.InvariantCulture, $"<data value=\"{total}\">{Numbers.Short(total, 6)}</data>"), html, StringComparison.Ordinal);
+    }
+
+    [Fact]
+    public void Write_PutsTheFileThere()
+    {
+        var path = PageWriter.Write(RunPage.Model(SampleRuns.Line(40, 3), CaseLabels.None, SampleRuns.Provenance), directory);
+        Assert.Equal(Path.Combine(directory, "report.html"), path);
+        Assert.StartsWith("<!doctype html>", File.ReadAllText(path), StringComparison.Ordinal);
+    }
+}
