@@ -1,5 +1,7 @@
 using System.Diagnostics;
 using System.Globalization;
+using FlowSolver.Problems;
+using FlowSolver.Studies;
 
 namespace FlowSolver.Cli;
 
@@ -60,6 +62,18 @@ internal sealed class ProgressLine : IDisposable
         var (on, off) = colour ? ("\u001b[36m", "\u001b[0m") : ("", "");
         writer.Write(string.Create(CultureInfo.InvariantCulture, $"\r\u001b[K{on}{bar}{off} {100 * share,3:f0} %  {doing}{left}"));
         writer.Flush();
+    }
+
+    /// <summary>Shows the progress of a comparison.</summary>
+    public IProgress<ComparisonProgress> For(TimePlan plan) => new ComparisonReporter(this, plan);
+
+    private sealed class ComparisonReporter(ProgressLine line, TimePlan plan) : IProgress<ComparisonProgress>
+    {
+        public void Report(ComparisonProgress value)
+        {
+            var time = plan.ReportTimes[Math.Min(value.Report, plan.ReportTimes.Count - 1)];
+            line.Show(value.Report, value.Reports, string.Create(CultureInfo.InvariantCulture, $"t = {time:g4}  {value.Doing}"));
+        }
     }
 
     /// <summary>Removes the bar, so that what follows starts on a clean line.</summary>

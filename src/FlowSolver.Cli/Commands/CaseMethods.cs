@@ -1,0 +1,11 @@
+using FlowSolver.Cli.CaseFiles;
+using FlowSolver.Schemes;
+
+namespace FlowSolver.Cli.Commands;
+
+/// <summary>Schemes by the names of a case, with the case's options.</summary>
+internal static class CaseMethods
+{
+    /// <summary>The scheme of that name. Names have been checked when the case was read.</summary>
+    public static FlowScheme Scheme(string name, CaseFile read) => SchemeCatalogue.Find(name)!;
+}
