@@ -1,0 +1,368 @@
+using FlowSolver.Foundation;
+using FlowSolver.Grids;
+
+namespace FlowSolver.Transport;
+
+/// <summary>
+/// Newton's method for the transport of a to b between smooth densities: the potential φ on b's side with b(y) = a(y + ∇φ) det(I + D²φ), so that
+/// y ↦ y + ∇φ(y) carries b back to a.
+/// </summary>
+/// <remarks>
+/// Newton on the logarithm of the Monge-Ampère equation (G. Loeper, F. Rapetti, C. R. Acad. Sci. Paris 340 (2005) 319-324, with damping): with
+/// R = log b − log a(y + ∇φ) − log det(I + D²φ) the update solves −∇·(b (I + D²φ)⁻¹ ∇δ) = −b (R − mean of R under b). Departures: divergence
+/// form, hence a symmetric system; a floor of 10⁻¹² of the largest weight continues the update harmonically into the tails. Derivatives by
+/// differences of fourth order, even across walls; log a between the cells by the cubic through four neighbours an axis. R is formed from differences
+/// of logarithms, so that densities that differ by 10⁻⁸ still give digits. For normal densities log R is a quadratic and a few steps do.
+/// </remarks>
+internal sealed class PlaneNewton
+{
+    private const double Floor = 1e-12;
+    private const double LeastEigenvalue = 0.02;
+    private const double MostEigenvalue = 50;
+    private const double Tiny = 1e-300;
+    private const int RowsPerBlock = 16;
+    private readonly WorkerTeam team;
+    private readonly int nx;
+    private readonly int ny;
+    private readonly double widthX;
+    private readonly double widthY;
+    private readonly int[] columns;
+    private readonly int[] rows;
+    private readonly int blocks;
+    private readonly PlaneElliptic elliptic;
+    private readonly double[] logSource;
+    private readonly double[] logRatio;
+    private readonly double[] source;
+    private readonly double[] target;
+    private readonly double[] trial;
+    private readonly double[] update;
+    private readonly double[] right;
+    private readonly double[] stiffXX;
+    private readonly double[] stiffXY;
+    private readonly double[] stiffYY;
+    private readonly double[] mismatch;
+    private readonly double[] partial;
+    private readonly Action<int> gradientJob;
+    private readonly Action<int> mismatchJob;
+    private readonly Action<int> stiffnessJob;
+    private double[] current;
+
+    public PlaneNewton(Grid grid, WorkerTeam team)
+    {
+        this.team = team;
+        Grid = grid;
+        (nx, ny) = (grid.Nx, grid.Ny);
+        (widthX, widthY) = (grid.X.Width, grid.Y!.Width);
+        columns = GhostIndices(nx, grid.X.IsPeriodic);
+        rows = GhostIndices(ny, grid.Y.IsPeriodic);
+        blocks = (ny + RowsPerBlock - 1) / RowsPerBlock;
+        elliptic = new PlaneElliptic(nx, ny, grid.X.IsPeriodic, grid.Y.IsPeriodic, widthX, widthY, team) { HasCorners = true };
+        var cells = grid.CellCount;
+        Potential = new double[cells];
+        GradientX = new double[cells];
+        GradientY = new double[cells];
+        Pulled = new double[cells];
+        logSource = new double[cells];
+        logRatio = new double[cells];
+        source = new double[cells];
+        target = new double[cells];
+        trial = new double[cells];
+        update = new double[cells];
+        right = new double[cells];
+        stiffXX = new double[cells];
+        stiffXY = new double[cells];
+        stiffYY = new double[cells];
+        mismatch = new double[cells];
+        partial = new double[24 * blocks];
+        gradientJob = Gradient;
+        mismatchJob = Mismatch;
+        stiffnessJob = Stiffness;
+        current = Potential;
+    }
+
+    public Grid Grid { get; }
+
+    /// <summary>φ; start value on entry to <see cref="Run"/>.</summary>
+    public double[] Potential { get; }
+
+    /// <summary>∂φ/∂x at the last evaluation.</summary>
+    public double[] GradientX { get; }
+
+    /// <summary>∂φ/∂y at the last evaluation.</summary>
+    public double[] GradientY { get; }
+
+    /// <summary>a(y + ∇φ) det(I + D²φ) at the last evaluation: the density that y ↦ y + ∇φ carries exactly to a.</summary>
+    public double[] Pulled { get; }
+
+    /// <summary>Sums |pulled − b| over the cells: twice the mass that is not in its place.</summary>
+    public double Residual { get; private set; }
+
+    public int LinearIterations { get; private set; }
+
+    public void SetDensities(double[] a, double[] b)
+    {
+        a.CopyTo(source, 0);
+        b.CopyTo(target, 0);
+        for (var i = 0; i < a.Length; i++)
+        {
+            logSource[i] = Math.Log(Math.Max(a[i], Tiny));
+            var relative = (b[i] - a[i]) / Math.Max(a[i], Tiny);
+            logRatio[i] = Math.Abs(relative) < 0.5 ? LogOnePlus(relative) : Math.Log(Math.Max(b[i], Tiny)) - logSource[i];
+        }
+    }
+
+    /// <summary>
+    /// Improves the potential; returns the steps taken. Stops when the residual is below <paramref name="tolerance"/>, no longer falls, or the limit is reached.
+    /// </summary>
+    public int Run(double tolerance, int limit, CancellationToken cancellation = default)
+    {
+        Evaluate(Potential);
+        var steps = 0;
+        while (steps < limit && Residual > tolerance)
+        {
+            cancellation.ThrowIfCancellationRequested();
+            var before = Residual;
+            SolveForUpdate();
+            steps++;
+            var factor = 1.0;
+            for (var attempt = 0; ; attempt++)
+            {
+                for (var i = 0; i < trial.Length; i++)
+                    trial[i] = Potential[i] + factor * update[i];
+                Evaluate(trial);
+                if (Residual < before * (1 - 0.1 * factor) || attempt == 5)
+                    break;
+                factor *= 0.5;
+            }
+
+            if (!(Residual < before))
+            {
+                Evaluate(Potential);
+                break;
+            }
+
+            trial.CopyTo(Potential, 0);
+            if (Residual > 0.7 * before && before < 1e-6)
+                break;
+        }
+
+        return steps;
+    }
+
+    /// <summary>Sets gradient, pulled density and residual for a potential.</summary>
+    public void Evaluate(double[] potential)
+    {
+        current = potential;
+        team.Run(blocks, gradientJob);
+        team.Run(blocks, mismatchJob);
+        Residual = SumPartials(0) * widthX * widthY;
+    }
+
+    private double SumPartials(int kind)
+    {
+        var sum = 0.0;
+        for (var i = 0; i < blocks; i++)
+            sum += partial[24 * i + 8 * kind];
+        return sum;
+    }
+
+    private void SolveForUpdate()
+    {
+        // Mean of R under b, so that the right side adds up to 0 without touching the tails.
+        var mean = SumPartials(1) / SumPartials(2);
+        for (var i = 0; i < right.Length; i++)
+            right[i] = -target[i] * (mismatch[i] - mean);
+        var largest = SpanKernels.MaxAbs(target);
+        for (var i = 0; i < target.Length; i++)
+        {
+            stiffXX[i] += Floor * largest;
+            stiffYY[i] += Floor * largest;
+        }
+
+        team.Run(blocks, stiffnessJob);
+        elliptic.Prepare();
+        LinearIterations += elliptic.Solve(right, update, Math.Clamp(0.1 * Residual, 1e-7, 1e-3), 60);
+    }
+
+    private void Stiffness(int block)
+    {
+        var (scaleX, scaleY, scaleXY) = (0.5 / (widthX * widthX), 0.5 / (widthY * widthY), 0.125 / (widthX * widthY));
+        for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
+        {
+            var (here, up) = (row * nx, rows[row + 3] * nx);
+            var alongX = elliptic.RowX(row);
+            var alongY = elliptic.RowY(row);
+            var corner = elliptic.RowCorner(row);
+            for (var i = 0; i < nx; i++)
+            {
+                var next = columns[i + 3];
+                alongX[i] = scaleX * (stiffXX[here + i] + stiffXX[here + next]);
+                alongY[i] = scaleY * (stiffYY[here + i] + stiffYY[up + i]);
+                corner[i] = scaleXY * (stiffXY[here + i] + stiffXY[here + next] + stiffXY[up + i] + stiffXY[up + next]);
+            }
+        }
+    }
+
+    private void Gradient(int block)
+    {
+        var (scaleX, scaleY) = (1 / (12 * widthX), 1 / (12 * widthY));
+        var phi = current;
+        for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
+        {
+            var (r0, r1, r3, r4, r2) = (rows[row] * nx, rows[row + 1] * nx, rows[row + 3] * nx, rows[row + 4] * nx, row * nx);
+            for (var i = 0; i < nx; i++)
+            {
+                var (c0, c1, c3, c4) = (columns[i], columns[i + 1], columns[i + 3], columns[i + 4]);
+                GradientX[r2 + i] = scaleX * (8 * (phi[r2 + c3] - phi[r2 + c1]) - (phi[r2 + c4] - phi[r2 + c0]));
+                GradientY[r2 + i] = scaleY * (8 * (phi[r3 + i] - phi[r1 + i]) - (phi[r4 + i] - phi[r0 + i]));
+            }
+        }
+    }
+
+    private void Mismatch(int block)
+    {
+        var (scaleX, scaleY, mixed) = (1 / (12 * widthX * widthX), 1 / (12 * widthY * widthY), 1 / (12 * widthY));
+        var phi = current;
+        double difference = 0, weighted = 0, weight = 0;
+        for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
+        {
+            var (r0, r1, r2, r3, r4) = (rows[row] * nx, rows[row + 1] * nx, row * nx, rows[row + 3] * nx, rows[row + 4] * nx);
+            for (var i = 0; i < nx; i++)
+            {
+                var (c0, c1, c3, c4) = (columns[i], columns[i + 1], columns[i + 3], columns[i + 4]);
+                var cell = r2 + i;
+                var p = phi[cell];
+                var xx = scaleX * (16 * (phi[r2 + c1] - p + (phi[r2 + c3] - p)) - (phi[r2 + c0] - p + (phi[r2 + c4] - p)));
+                var yy = scaleY * (16 * (phi[r1 + i] - p + (phi[r3 + i] - p)) - (phi[r0 + i] - p + (phi[r4 + i] - p)));
+                var xy = mixed * (8 * (GradientX[r3 + i] - GradientX[r1 + i]) - (GradientX[r4 + i] - GradientX[r0 + i]));
+                var change = xx + yy + xx * yy - xy * xy;
+                double logDeterminant;
+                double inverseXX, inverseXY, inverseYY;
+                if (change > -0.9 && xx > -0.95 && yy > -0.95 && change < 1000)
+                {
+                    var inverse = 1 / (1 + change);
+                    (inverseXX, inverseXY, inverseYY) = ((1 + yy) * inverse, -xy * inverse, (1 + xx) * inverse);
+                    logDeterminant = LogOnePlus(change);
+                }
+                else
+                {
+                    logDeterminant = Clamped(1 + xx, xy, 1 + yy, out inverseXX, out inverseXY, out inverseYY);
+                }
+
+                var carried = LogSourceAhead(i, row, GradientX[cell] / widthX, GradientY[cell] / widthY);
+                var b = target[cell];
+                var r = logRatio[cell] - carried - logDeterminant;
+                if (!double.IsFinite(r))
+                    r = 0;
+                mismatch[cell] = r;
+                double pulled;
+                if (Math.Abs(r) < 0.5 && b > 0)
+                {
+                    var relative = ExpMinusOne(-r);
+                    pulled = b + b * relative;
+                    difference += b * Math.Abs(relative);
+                }
+                else
+                {
+                    pulled = Math.Exp(Math.Min(logSource[cell] + carried + logDeterminant, 600));
+                    difference += Math.Min(Math.Abs(pulled - b), b);
+                }
+
+                Pulled[cell] = pulled;
+                weighted += b * r;
+                weight += b;
+                stiffXX[cell] = b * inverseXX;
+                stiffXY[cell] = b * inverseXY;
+                stiffYY[cell] = b * inverseYY;
+            }
+        }
+
+        (partial[24 * block], partial[24 * block + 8], partial[24 * block + 16]) = (difference, weighted, weight);
+    }
+
+    // log a at the displaced point minus log a at the cell; u, v in cells.
+    private double LogSourceAhead(int column, int row, double u, double v)
+    {
+        if (!(Math.Abs(u) < 1e6 && Math.Abs(v) < 1e6))
+            return double.NaN;
+        var here = logSource[row * nx + column];
+        var (baseU, baseV) = ((int)Math.Floor(u), (int)Math.Floor(v));
+        var (s, t) = (u - baseU, v - baseV);
+        var a0 = -s * (s - 1) * (s - 2) / 6;
+        var a1 = (s + 1) * (s - 1) * (s - 2) / 2;
+        var a2 = -(s + 1) * s * (s - 2) / 2;
+        var a3 = (s + 1) * s * (s - 1) / 6;
+        var (x0, x1, x2, x3) = (Fold(column + baseU - 1, nx, Grid.X.IsPeriodic), Fold(column + baseU, nx, Grid.X.IsPeriodic),
+            Fold(column + baseU + 1, nx, Grid.X.IsPeriodic), Fold(column + baseU + 2, nx, Grid.X.IsPeriodic));
+        var sum = 0.0;
+        for (var k = 0; k < 4; k++)
+        {
+            var w = k switch
+            {
+                0 => -t * (t - 1) * (t - 2) / 6,
+                1 => (t + 1) * (t - 1) * (t - 2) / 2,
+                2 => -(t + 1) * t * (t - 2) / 2,
+                _ => (t + 1) * t * (t - 1) / 6,
+            };
+            var start = Fold(row + baseV - 1 + k, ny, Grid.Y!.IsPeriodic) * nx;
+            sum += w * (a0 * (logSource[start + x0] - here) + a1 * (logSource[start + x1] - here)
+                + a2 * (logSource[start + x2] - here) + a3 * (logSource[start + x3] - here));
+        }
+
+        return sum;
+    }
+
+    // log det and inverse with the eigenvalues held between two bounds: keeps the system positive where the tails of φ are rough.
+    private static double Clamped(double xx, double xy, double yy, out double inverseXX, out double inverseXY, out double inverseYY)
+    {
+        var (middle, half) = (0.5 * (xx + yy), 0.5 * (xx - yy));
+        var radius = Math.Sqrt(half * half + xy * xy);
+        var (cos, sin) = radius > 0 ? (half / radius, xy / radius) : (1, 0);
+        var upper = Math.Clamp(middle + radius, LeastEigenvalue, MostEigenvalue);
+        var lower = Math.Clamp(middle - radius, LeastEigenvalue, MostEigenvalue);
+        if (double.IsNaN(upper) || double.IsNaN(lower))
+            (upper, lower, cos, sin) = (1, 1, 1, 0);
+        var (mean, difference) = (0.5 * (1 / upper + 1 / lower), 0.5 * (1 / upper - 1 / lower));
+        (inverseXX, inverseXY, inverseYY) = (mean + difference * cos, difference * sin, mean - difference * cos);
+        return Math.Log(upper * lower);
+    }
+
+    private static int Fold(int index, int count, bool periodic)
+    {
+        if ((uint)index < (uint)count)
+            return index;
+        if (periodic)
+        {
+            var wrapped = index % count;
+            return wrapped < 0 ? wrapped + count : wrapped;
+        }
+
+        var phase = index % (2 * count);
+        if (phase < 0)
+            phase += 2 * count;
+        return phase < count ? phase : 2 * count - 1 - phase;
+    }
+
+    private static int[] GhostIndices(int count, bool periodic)
+    {
+        var indices = new int[count + 5];
+        for (var i = 0; i < indices.Length; i++)
+            indices[i] = Fold(i - 2, count, periodic);
+        return indices;
+    }
+
+    // log(1 + x) and e^x − 1 without loss for small x (W. Kahan's forms).
+    private static double LogOnePlus(double x)
+    {
+        var y = 1 + x;
+        return y == 1 ? x : Math.Log(y) * (x / (y - 1));
+    }
+
+    private static double ExpMinusOne(double x)
+    {
+        if (Math.Abs(x) < 1e-5)
+            return x + 0.5 * x * x;
+        var y = Math.Exp(x);
+        return y == 1 ? x : y - 1 == -1 ? -1 : (y - 1) * (x / Math.Log(y));
+    }
+}

@@ -1,0 +1,494 @@
+using FlowSolver.Foundation;
+using FlowSolver.Grids;
+
+namespace FlowSolver.Transport;
+
+/// <summary>How a transport problem in the plane was solved.</summary>
+public enum PlaneMethod
+{
+    /// <summary>The densities were the same: nothing moves.</summary>
+    Identical,
+
+    /// <summary>Newton's method on the Monge-Ampère equation: smooth densities.</summary>
+    Newton,
+
+    /// <summary>Dual ascent with a rounded plan: densities with edges or holes.</summary>
+    Ascent,
+}
+
+/// <summary>What to aim at in <see cref="PlaneTransport.Solve"/>.</summary>
+public sealed record PlaneTransportOptions
+{
+    /// <summary>
+    /// Relative width (High − Low)/High of the bracket that Newton's method must reach; above it dual ascent is tried as well and the narrower
+    /// bracket kept. Default 0.002. A promise about the bracket, not about the distance, which is usually far better.
+    /// </summary>
+    public double Tolerance { get; init; } = 2e-3;
+
+    /// <summary>Most iterations of Newton's method on each grid. Default 12.</summary>
+    public int NewtonSteps { get; init; } = 12;
+
+    /// <summary>Most iterations of dual ascent on each grid, each on both sides. Default 60 on coarse grids; the finest gets a quarter.</summary>
+    public int AscentSteps { get; init; } = 60;
+}
+
+/// <summary>Optimal transport between two densities on one grid.</summary>
+public sealed record PlaneTransportResult
+{
+    /// <summary>W2 with its bounds, in units of length.</summary>
+    public required TransportBracket Bracket { get; init; }
+
+    /// <summary>The density that is moved, of mass 1.</summary>
+    public required Density From { get; init; }
+
+    /// <summary>The density that it is moved to, of mass 1.</summary>
+    public required Density To { get; init; }
+
+    /// <summary>x part of the map: mass at centre x goes to x + displacement. At the cell centres, x fastest; on a circle the shorter way round.</summary>
+    public required double[] DisplacementX { get; init; }
+
+    /// <summary>y part of the map.</summary>
+    public required double[] DisplacementY { get; init; }
+
+    /// <summary>φ on the side of <see cref="To"/>, in units of length²: W2²/2 ≥ ∫ From·φᶜ − ∫ To·φ, φᶜ(x) = min over y of ½|x − y|² + φ(y).</summary>
+    public required double[] Potential { get; init; }
+
+    /// <summary>φᶜ on the side of <see cref="From"/>.</summary>
+    public required double[] Conjugate { get; init; }
+
+    /// <summary>Iterations, over all grids.</summary>
+    public required int Iterations { get; init; }
+
+    /// <summary>The method whose bracket is given.</summary>
+    public required PlaneMethod Method { get; init; }
+
+    /// <summary>Why the iteration ended, as a sentence.</summary>
+    public required string StopReason { get; init; }
+
+    /// <summary>Share of the mass that the map alone would leave in the wrong place; its cost is part of <see cref="TransportBracket.High"/>.</summary>
+    public required double MisplacedMass { get; init; }
+
+    /// <summary>
+    /// √((hx² + hy²)/3): between densities constant in cells W2 differs by at most this from that between masses at the cell centres (each density
+    /// moves by √((hx² + hy²)/12) at most).
+    /// </summary>
+    public required double GridBound { get; init; }
+}
+
+/// <summary>
+/// Wasserstein-2 distance in the plane with lower and upper bound and the map itself, between any two densities on one grid; axes with walls, periodic
+/// ones, and one of each.
+/// </summary>
+/// <remarks>
+/// <b>What the numbers mean.</b> Integrals are sums over cell centres. Low is a dual value: any potential φ gives ∫a φᶜ − ∫b φ ≤ W2²/2, with a
+/// c-transform that is really taken, between the centres (never above the one over the centres: Low holds for masses at the centres to rounding).
+/// <para>Smooth densities (<see cref="PlaneMethod.Newton"/>): densities are read as samples of smooth functions. High is the cost of the map
+/// y ↦ y + ∇φ, which carries the pulled density b′ exactly to a, plus a bound for moving b′ to b: the flux bound W2² ≤ ∫|m|²/Λ with ∇·m = b′ − b and Λ the logarithmic mean of the two
+/// (the straight path of densities: J.-D. Benamou, Y. Brenier, Numer. Math. 84 (2000) 375-393), and what that cannot reach by a plan. Both bounds carry quadrature errors of fourth order in the
+/// cell width; where these exceed the gap, Low and High are exchanged.</para>
+/// <para>Others (<see cref="PlaneMethod.Ascent"/>): High is the cost of a feasible plan between cells, so it bounds W2 for masses at the centres, and also for densities constant in cells
+/// (let each pair of cells move by a translation). Low is proved for masses at the centres; for densities constant in cells widen it by <see cref="PlaneTransportResult.GridBound"/>.</para>
+/// Coarse to fine where the densities are not near each other. The result does not depend on the team's size.
+/// </remarks>
+public static class PlaneTransport
+{
+    private const int CoarsestCells = 96;
+    private const double Contact = 1e-3;
+
+    /// <summary>W2 with bounds between two densities on one plane grid, in units of length.</summary>
+    /// <exception cref="ArgumentException">A grid is not plane, the grids differ, or a density is not a number or without mass.</exception>
+    public static TransportBracket Between(Density first, Density second, WorkerTeam team) => Solve(first, second, new PlaneTransportOptions(), team).Bracket;
+
+    /// <summary>Solves the transport problem; densities are scaled to mass 1 first.</summary>
+    /// <param name="from">The density that is moved.</param>
+    /// <param name="to">The density that it is moved to.</param>
+    /// <param name="options">What to aim at.</param>
+    /// <param name="team">Threads to use; the result does not depend on their number.</param>
+    /// <param name="cancellation">Looked at between iterations.</param>
+    /// <exception cref="ArgumentException">A grid is not plane, the grids differ, or a density is not a number or without mass.</exception>
+    public static PlaneTransportResult Solve(
+        Density from, Density to, PlaneTransportOptions options, WorkerTeam team, CancellationToken cancellation = default)
+    {
+        ArgumentNullException.ThrowIfNull(from);
+        ArgumentNullException.ThrowIfNull(to);
+        ArgumentNullException.ThrowIfNull(options);
+        ArgumentNullException.ThrowIfNull(team);
+        Require.That(from.Grid.Dimension == 2, "The densities were on a line; they must be on a plane grid.");
+        Require.That(from.Grid == to.Grid, "The two densities were on different grids; they must be on one.");
+        var (a, b) = (Checked(from), Checked(to));
+        var distance = 0.0;
+        for (var i = 0; i < a.Values.Length; i++)
+            distance += Math.Abs(a.Values[i] - b.Values[i]);
+        distance *= 0.5 * a.Grid.CellVolume;
+        if (distance == 0)
+            return Nothing(a, b);
+        return new Solver(a, b, distance, options, team, cancellation).Run();
+    }
+
+    /// <summary>√((hx² + hy²)/3) for a plane grid; see <see cref="PlaneTransportResult.GridBound"/>.</summary>
+    public static double GridBound(Grid grid)
+    {
+        ArgumentNullException.ThrowIfNull(grid);
+        Require.That(grid.Y is not null, "The grid was a line; it must be plane.");
+        return Math.Sqrt((grid.X.Width * grid.X.Width + grid.Y.Width * grid.Y.Width) / 3);
+    }
+
+    private static Density Checked(Density density)
+    {
+        foreach (var value in density.Values)
+            Require.That(value >= 0 && double.IsFinite(value), $"A density had the value {value}; it must be finite and not below 0.");
+        Require.That(density.Mass > 0, "A density had no mass; it must have some.");
+        return density.Normalised();
+    }
+
+    private static PlaneTransportResult Nothing(Density a, Density b)
+    {
+        var zero = new double[a.Values.Length];
+        return new PlaneTransportResult
+        {
+            Bracket = TransportBracket.Exact(0),
+            From = a,
+            To = b,
+            DisplacementX = zero,
+            DisplacementY = zero,
+            Potential = zero,
+            Conjugate = zero,
+            Iterations = 0,
+            Method = PlaneMethod.Identical,
+            StopReason = "The two densities were the same.",
+            MisplacedMass = 0,
+            GridBound = GridBound(a.Grid),
+        };
+    }
+
+    private sealed class Solver(
+        Density a, Density b, double distance, PlaneTransportOptions options, WorkerTeam team, CancellationToken cancellation)
+    {
+        private readonly Grid grid = a.Grid;
+        private int iterations;
+
+        public PlaneTransportResult Run()
+        {
+            var levels = Levels();
+            var newton = new PlaneNewton(grid, team);
+            newton.SetDensities(a.Values, b.Values);
+            PlaneTransportResult? smooth = null;
+            if (distance < 0.3 || levels.Count == 1)
+            {
+                iterations += newton.Run(1e-5 * 2 * distance, options.NewtonSteps, cancellation);
+                smooth = newton.Residual < 0.05 * distance ? Smooth(newton) : null;
+                if (smooth is not null && IsNarrow(smooth))
+                    return smooth;
+            }
+
+            var (potential, isSmooth) = ClimbLevels(levels);
+            if (isSmooth && smooth is null)
+            {
+                potential.CopyTo(newton.Potential, 0);
+                iterations += newton.Run(1e-5 * 2 * distance, options.NewtonSteps, cancellation);
+                smooth = newton.Residual < 0.05 ? Smooth(newton) : null;
+                if (smooth is not null && IsNarrow(smooth))
+                    return smooth;
+                if (smooth is not null)
+                    newton.Potential.CopyTo(potential, 0);
+            }
+
+            var rough = Rough(potential);
+            return smooth is not null && Width(smooth) <= Width(rough) ? smooth : rough;
+        }
+
+        private bool IsNarrow(PlaneTransportResult result) => Width(result) <= options.Tolerance * result.Bracket.High;
+
+        private static double Width(PlaneTransportResult result) => result.Bracket.High - result.Bracket.Low;
+
+        private List<(Density A, Density B)> Levels()
+        {
+            var list = new List<(Density A, Density B)> { (a, b) };
+            while (Math.Max(list[^1].A.Grid.Nx, list[^1].A.Grid.Ny) > CoarsestCells && list[^1].A.Grid.Halved() is { } half)
+                list.Add((list[^1].A.CoarsenedTo(half), list[^1].B.CoarsenedTo(half)));
+            return list;
+        }
+
+        // Potential for the finest grid from the coarser ones, and whether Newton's method held on the last of them.
+        private (double[] Potential, bool IsSmooth) ClimbLevels(List<(Density A, Density B)> levels)
+        {
+            var potential = new double[levels[^1].A.Values.Length];
+            var isSmooth = true;
+            for (var l = levels.Count - 1; l >= 1; l--)
+            {
+                var (coarseA, coarseB) = levels[l];
+                var coarse = coarseA.Grid;
+                var first = l == levels.Count - 1;
+                if (first)
+                {
+                    var ascent = new PlaneAscent(coarse, team);
+                    ascent.SetDensities(coarseA.Values, coarseB.Values);
+                    iterations += ascent.Run(options.AscentSteps, 1e-6, 1e-4, cancellation);
+                    ascent.Potential.CopyTo(potential, 0);
+                }
+
+                if (isSmooth)
+                {
+                    var newton = new PlaneNewton(coarse, team);
+                    newton.SetDensities(coarseA.Values, coarseB.Values);
+                    if (first)
+                        Blur(potential, coarse, newton.Potential);
+                    else
+                        potential.CopyTo(newton.Potential, 0);
+                    iterations += newton.Run(1e-4 * distance, options.NewtonSteps, cancellation);
+                    isSmooth = newton.Residual < 0.1;
+                    if (isSmooth)
+                        newton.Potential.CopyTo(potential, 0);
+                }
+
+                if (!isSmooth && !first)
+                {
+                    var ascent = new PlaneAscent(coarse, team);
+                    ascent.SetDensities(coarseA.Values, coarseB.Values);
+                    potential.CopyTo(ascent.Potential, 0);
+                    iterations += ascent.Run(options.AscentSteps / 2, 1e-6, 1e-5, cancellation);
+                    ascent.Potential.CopyTo(potential, 0);
+                }
+
+                potential = Refined(potential, coarse);
+            }
+
+            return (potential, isSmooth && levels.Count > 1);
+        }
+
+        private PlaneTransportResult Smooth(PlaneNewton newton)
+        {
+            var cells = grid.CellCount;
+            var (dx, dy, f) = (new double[cells], new double[cells], new double[cells]);
+            var minimisers = new int[cells];
+            var transform = new CTransform(grid, 1, team);
+            var phi = newton.Potential;
+            transform.ApplyBetweenCenters(phi, f, dx, dy, minimisers);
+            var low = Math.Sqrt(Math.Max(0, 2 * Dual(phi, f)));
+
+            // Where φ lies above the transform of its transform no mass arrives: the pulled density counts only in contact.
+            var (back, unusedX, unusedY) = (new double[cells], new double[cells], new double[cells]);
+            for (var i = 0; i < cells; i++)
+                unusedX[i] = -f[i];
+            transform.ApplyBetweenCenters(unusedX, back, unusedY, new double[cells], minimisers);
+            var slack = Contact * (grid.X.Width * grid.X.Width + grid.Y!.Width * grid.Y.Width);
+            var pulled = new double[cells];
+            double mass = 0, cost = 0;
+            for (var i = 0; i < cells; i++)
+            {
+                if (Math.Abs(phi[i] + back[i]) > slack)
+                    continue;
+                pulled[i] = newton.Pulled[i];
+                mass += pulled[i];
+                cost += pulled[i] * (newton.GradientX[i] * newton.GradientX[i] + newton.GradientY[i] * newton.GradientY[i]);
+            }
+
+            var scale = 1 / (mass * grid.CellVolume);
+            SpanKernels.Scale(pulled, scale);
+            var high = Math.Sqrt(cost / mass) + MoveBound(pulled, b.Values);
+            return Result(low, high, low, phi, f, dx, dy, PlaneMethod.Newton, 0.5 * newton.Residual,
+                "Newton's method reached its tolerance or the limit of the grid.");
+        }
+
+        // √(flux cost) + √(plan cost of the rest): an upper bound of W2 between two densities of one mass.
+        private double MoveBound(double[] there, double[] wanted)
+        {
+            var (nx, ny) = (grid.Nx, grid.Ny);
+            var elliptic = new PlaneElliptic(nx, ny, grid.X.IsPeriodic, grid.Y!.IsPeriodic, grid.X.Width, grid.Y.Width, team);
+            var weight = new double[grid.CellCount];
+            var least = 1e-13 * SpanKernels.MaxAbs(wanted);
+            var right = new double[grid.CellCount];
+            for (var i = 0; i < weight.Length; i++)
+            {
+                weight[i] = Math.Min(there[i], wanted[i]) > least ? LogarithmicMean(there[i], wanted[i]) : least;
+                right[i] = wanted[i] - there[i];
+            }
+
+            for (var row = 0; row < ny; row++)
+            {
+                var faceX = elliptic.RowX(row);
+                var faceY = elliptic.RowY(row);
+                for (var i = 0; i < nx; i++)
+                {
+                    var here = weight[row * nx + i];
+                    faceX[i] = Harmonic(here, weight[row * nx + (i + 1) % nx], least) / (grid.X.Width * grid.X.Width);
+                    faceY[i] = Harmonic(here, weight[(row + 1) % ny * nx + i], least) / (grid.Y.Width * grid.Y.Width);
+                }
+            }
+
+            elliptic.Prepare();
+            var p = new double[right.Length];
+            elliptic.Solve(right, p, 1e-7, 60);
+
+            // The flux between cells that both hold mass is paid for; what it leaves behind moves by a plan.
+            var flux = 0.0;
+            var arrived = new double[right.Length];
+            for (var i = 0; i < right.Length; i++)
+                arrived[i] = -right[i] * grid.CellVolume;
+            for (var row = 0; row < ny; row++)
+            {
+                for (var i = 0; i < nx; i++)
+                {
+                    var here = row * nx + i;
+                    if (i + 1 < nx || grid.X.IsPeriodic)
+                        Cross(here, row * nx + (i + 1) % nx, 1 / (grid.X.Width * grid.X.Width));
+                    if (row + 1 < ny || grid.Y.IsPeriodic)
+                        Cross(here, (row + 1) % ny * nx + i, 1 / (grid.Y.Width * grid.Y.Width));
+                }
+            }
+
+            var rest = new PlaneRounding(grid).Settle(arrived, null, null, new double[right.Length]);
+            return Math.Sqrt(flux) + Math.Sqrt(Math.Max(0, rest));
+
+            void Cross(int from, int to, double perSquare)
+            {
+                var face = Harmonic(weight[from], weight[to], least);
+                if (face == least)
+                    return;
+                var moved = face * perSquare * (p[from] - p[to]) * grid.CellVolume;
+                arrived[from] += moved;
+                arrived[to] -= moved;
+                flux += moved * (p[from] - p[to]);
+            }
+        }
+
+        // Exactly the floor where either cell is on it.
+        private static double Harmonic(double first, double second, double floor)
+            => first == floor || second == floor ? floor : 2 * first * second / (first + second);
+
+        private static double LogarithmicMean(double first, double second)
+        {
+            var ratio = (second - first) / first;
+            return Math.Abs(ratio) < 1e-4 ? first * (1 + ratio / 2 - ratio * ratio / 12) : (second - first) / Math.Log(second / first);
+        }
+
+        private PlaneTransportResult Rough(double[] potential)
+        {
+            var ascent = new PlaneAscent(grid, team);
+            ascent.SetDensities(a.Values, b.Values);
+            potential.CopyTo(ascent.Potential, 0);
+            var steps = ascent.Run(Math.Max(4, options.AscentSteps / 4), 1e-6, 1e-6, cancellation);
+            iterations += steps;
+            var cells = grid.CellCount;
+            var (dx, dy, f) = (new double[cells], new double[cells], new double[cells]);
+            new CTransform(grid, 1, team).ApplyBetweenCenters(ascent.Potential, f, dx, dy, new int[cells]);
+            var low = Math.Sqrt(Math.Max(0, 2 * Dual(ascent.Potential, f)));
+            var rounding = new PlaneRounding(grid);
+            var bySlope = ascent.RoundedPlanCost(ascent.DisplacementX, ascent.DisplacementY, rounding);
+            var byMinimum = ascent.RoundedPlanCost(dx, dy, rounding);
+            if (bySlope < byMinimum)
+            {
+                ascent.DisplacementX.CopyTo(dx, 0);
+                ascent.DisplacementY.CopyTo(dy, 0);
+            }
+
+            var high = Math.Sqrt(Math.Min(bySlope, byMinimum));
+            return Result(low, high, 0.5 * (low + high), ascent.Potential, f, dx, dy, PlaneMethod.Ascent, ascent.Misplaced,
+                steps < Math.Max(4, options.AscentSteps / 4) ? "The dual value no longer rose." : "The limit of iterations was reached.");
+        }
+
+        private double Dual(double[] phi, double[] f)
+        {
+            var (sum, rest) = (0.0, 0.0);
+            for (var i = 0; i < phi.Length; i++)
+            {
+                sum += (a.Values[i] - b.Values[i]) * phi[i];
+                rest += a.Values[i] * (f[i] - phi[i]);
+            }
+
+            return (sum + rest) * grid.CellVolume;
+        }
+
+        private PlaneTransportResult Result(
+            double low, double high, double best, double[] phi, double[] f, double[] dx, double[] dy, PlaneMethod method, double misplaced, string reason)
+            => new()
+            {
+                Bracket = new TransportBracket(best, Math.Min(low, high), Math.Max(low, high)),
+                From = a,
+                To = b,
+                DisplacementX = dx,
+                DisplacementY = dy,
+                Potential = (double[])phi.Clone(),
+                Conjugate = f,
+                Iterations = iterations,
+                Method = method,
+                StopReason = reason,
+                MisplacedMass = misplaced,
+                GridBound = GridBound(grid),
+            };
+
+        // Two passes of (1, 2, 1)/4 along each axis: takes the facets of a transform over centres out of the second derivatives.
+        private static void Blur(double[] source, Grid grid, double[] target)
+        {
+            var (nx, ny) = (grid.Nx, grid.Ny);
+            var middle = new double[source.Length];
+            source.CopyTo(target, 0);
+            for (var pass = 0; pass < 2; pass++)
+            {
+                for (var i = 0; i < target.Length; i++)
+                {
+                    var (row, column) = Math.DivRem(i, nx);
+                    var left = row * nx + (column > 0 ? column - 1 : grid.X.IsPeriodic ? nx - 1 : 0);
+                    var right = row * nx + (column < nx - 1 ? column + 1 : grid.X.IsPeriodic ? 0 : column);
+                    middle[i] = 0.25 * (target[left] + 2 * target[i] + target[right]);
+                }
+
+                for (var i = 0; i < target.Length; i++)
+                {
+                    var (row, column) = Math.DivRem(i, nx);
+                    var below = (row > 0 ? row - 1 : grid.Y!.IsPeriodic ? ny - 1 : 0) * nx + column;
+                    var above = (row < ny - 1 ? row + 1 : grid.Y!.IsPeriodic ? 0 : row) * nx + column;
+                    target[i] = 0.25 * (middle[below] + 2 * middle[i] + middle[above]);
+                }
+            }
+        }
+
+        // Cubic interpolation to the grid of half the width: cell centres at ∓¼ of the coarse cell.
+        private static double[] Refined(double[] coarse, Grid grid)
+        {
+            var (nx, ny) = (grid.Nx, grid.Ny);
+            var wide = new double[2 * nx * ny];
+            Span<int> at = stackalloc int[5];
+            for (var row = 0; row < ny; row++)
+            {
+                for (var i = 0; i < nx; i++)
+                {
+                    for (var k = 0; k < 5; k++)
+                        at[k] = row * nx + Beside(i + k - 2, nx, grid.X.IsPeriodic);
+                    (wide[row * 2 * nx + 2 * i], wide[row * 2 * nx + 2 * i + 1]) =
+                        Quarters(coarse[at[0]], coarse[at[1]], coarse[at[2]], coarse[at[3]], coarse[at[4]]);
+                }
+            }
+
+            var fine = new double[4 * nx * ny];
+            for (var row = 0; row < ny; row++)
+            {
+                for (var k = 0; k < 5; k++)
+                    at[k] = Beside(row + k - 2, ny, grid.Y!.IsPeriodic) * 2 * nx;
+                for (var i = 0; i < 2 * nx; i++)
+                {
+                    (fine[2 * row * 2 * nx + i], fine[(2 * row + 1) * 2 * nx + i]) =
+                        Quarters(wide[at[0] + i], wide[at[1] + i], wide[at[2] + i], wide[at[3] + i], wide[at[4] + i]);
+                }
+            }
+
+            return fine;
+        }
+
+        private static int Beside(int index, int count, bool periodic)
+            => (uint)index < (uint)count ? index : periodic ? (index + count) % count : index < 0 ? -1 - index : 2 * count - 1 - index;
+
+        // Weights of the quartic through five neighbours at −¼ and +¼.
+        private static (double Left, double Right) Quarters(double v0, double v1, double v2, double v3, double v4)
+        {
+            // Stirling's formula at s = ¼: s²/2 δ² + s²(s² − 1)/24 δ⁴ and s μδ + s(s² − 1)/6 μδ³.
+            var second = v1 - 2 * v2 + v3;
+            var fourth = v0 - 4 * v1 + 6 * v2 - 4 * v3 + v4;
+            var symmetric = v2 + second / 32 + fourth * (0.0625 * (0.0625 - 1) / 24);
+            var slope = (v3 - v1) / 2;
+            var third = (v4 - 2 * v3 + 2 * v1 - v0) / 2;
+            var odd = 0.25 * slope + third * (0.25 * (0.0625 - 1) / 6);
+            return (symmetric - odd, symmetric + odd);
+        }
+    }
+}
