@@ -15,6 +15,7 @@ internal static class CommandTree
         {
             RunCommand.Create(host),
             CheckCommand.Create(host),
+            ConvergeCommand.Create(host),
             NewCommand.Create(host),
         };
         return root;
