@@ -230,7 +230,7 @@ public sealed class RunExplorer
             json.WriteString("method", map.Method);
             json.WriteNumber("from", map.FromTime);
             json.WriteNumber("to", map.ToTime);
-            PageJson.Numbers(json, "arrows", RunFigures.ArrowsOf(map, 12).SelectMany(arrow => (double[])[arrow.FromX, arrow.FromY, arrow.ToX, arrow.ToY]), 5);
+            PageJson.Numbers(json, "arrows", RunFigures.ArrowsOf(map, 9).SelectMany(arrow => (double[])[arrow.FromX, arrow.FromY, arrow.ToX, arrow.ToY]), 5);
             json.WriteEndObject();
         }
 

@@ -27,6 +27,9 @@ public static class RunFindings
     // An ensemble is called off when more than this share of its times is; a few of many are to be expected by chance.
     private const double OffShare = 0.2;
 
+    // A number and its unit stay together at the end of a line.
+    internal const string Space = "\u00a0";
+
     /// <summary>One finding a method but the yardstick, the largest distance first; failures before all.</summary>
     public static IReadOnlyList<MethodFinding> Of(ComparisonResult result, CaseLabels labels)
     {
@@ -42,7 +45,7 @@ public static class RunFindings
             findings.Add(failure is null ? finding : finding with
             {
                 IsFailed = true,
-                Sentence = $"{group.Key} failed{(failure.Time is { } time ? " at t = " + Time(time, labels) : "")}: {failure.Text} {finding.Sentence}",
+                Sentence = $"{group.Key} failed{(failure.Time is { } time ? " at " + AtTime(time, labels) : "")}: {failure.Text} {finding.Sentence}",
             });
         }
 
@@ -73,7 +76,7 @@ public static class RunFindings
             return new Verdict(VerdictTone.Sound, "No method differs from the exact flow by more than grid error and noise explain.", reasons);
         var first = off[0];
         var headline = string.Create(CultureInfo.InvariantCulture,
-            $"{first.Method} is furthest off: {Length(first.Worst!.DistanceToExact!.Value.Distance, labels)} from the exact flow at t = {Time(first.Worst.Time, labels)}{Share(result, first.Worst)}, {first.Cause}.");
+            $"{first.Method} is furthest off: {Length(first.Worst!.DistanceToExact!.Value.Distance, labels)} from the exact flow at {AtTime(first.Worst.Time, labels)}{Share(result, first.Worst)}, {first.Cause}.");
         var fine = findings.Where(finding => !finding.IsOff).Select(finding => finding.Method).ToList();
         if (fine.Count > 0)
             headline += " " + Listed(fine) + (fine.Count == 1 ? " agrees" : " agree") + " with it to within grid error and noise.";
@@ -121,7 +124,7 @@ public static class RunFindings
             : "; the exact flow has no error estimate here";
         return new MethodFinding(
             method, SeriesKind.Flow, worst, rows[^1], null, grid, isOff, false, cause,
-            $"{method}: at most {Length(distance.Distance, labels)} from the exact flow, at t = {Time(worst.Time, labels)}{against}. At the end: {Length(rows[^1].DistanceToExact?.Distance ?? distance.Distance, labels)}.");
+            $"{method}: at most {Length(distance.Distance, labels)} from the exact flow, at {AtTime(worst.Time, labels)}{against}. At the end: {Length(rows[^1].DistanceToExact?.Distance ?? distance.Distance, labels)}.");
     }
 
     private static MethodFinding OfSampler(ComparisonResult result, CaseLabels labels, List<SeriesRow> rows, SeriesRow? worst)
@@ -132,7 +135,7 @@ public static class RunFindings
         if (peak is null)
         {
             var sentence = worst?.DistanceToExact is { } known
-                ? $"{method}: at most {Length(known.Distance, labels)} from the exact flow, at t = {Time(worst.Time, labels)}. No error budget was computed."
+                ? $"{method}: at most {Length(known.Distance, labels)} from the exact flow, at {AtTime(worst.Time, labels)}. No error budget was computed."
                 : $"{method}: no distance to the exact flow was computed.";
             return new MethodFinding(method, SeriesKind.Ensemble, worst, rows[^1], null, null, false, false, "no error budget", sentence);
         }
@@ -151,7 +154,7 @@ public static class RunFindings
         var total = peak.Total ?? worst?.DistanceToExact?.Distance;
         return new MethodFinding(
             method, SeriesKind.Ensemble, worst, rows[^1], peak, peak.GridError, isOff, false, cause,
-            $"{method}: {(total is { } value ? $"at most {Length(value, labels)} from the exact flow, at t = {Time(peak.Time, labels)}" : "no distance to the exact flow")}"
+            $"{method}: {(total is { } value ? $"at most {Length(value, labels)} from the exact flow, at {AtTime(peak.Time, labels)}" : "no distance to the exact flow")}"
             + (parts.Count > 0 ? "; there " + Listed(parts) : "")
             + $". {(quiet == budget.Count ? "Within noise at all" : $"Within noise at {quiet} of")} {budget.Count} report times after the start.");
     }
@@ -176,13 +179,16 @@ public static class RunFindings
         if (exact is null || row.DistanceToExact is not { } distance)
             return "";
         var width = Math.Sqrt(exact.Moments.VarianceX + (result.Grid.Dimension == 2 ? exact.Moments.VarianceY : 0));
-        return width > 0 ? $" ({Numbers.Short(100 * distance.Distance / width, 2)} % of the density's standard deviation)" : "";
+        return width > 0 ? $" ({Numbers.Short(100 * distance.Distance / width, 2)}{Space}% of the density's standard deviation)" : "";
     }
 
     // Three digits in prose; tables and readouts carry more.
-    internal static string Length(double value, CaseLabels labels) => Numbers.Short(value, 3) + (labels.Length is null ? "" : " " + labels.Length);
+    internal static string Length(double value, CaseLabels labels) => Numbers.Short(value, 3) + (labels.Length is null ? "" : Space + labels.Length);
 
-    internal static string Time(double value, CaseLabels labels) => Numbers.Short(value) + (labels.Time is null ? "" : " " + labels.Time);
+    internal static string Time(double value, CaseLabels labels) => Numbers.Short(value) + (labels.Time is null ? "" : Space + labels.Time);
+
+    /// <summary>t = so much, in one piece.</summary>
+    internal static string AtTime(double value, CaseLabels labels) => "t" + Space + "=" + Space + Time(value, labels);
 
     internal static string Listed(IReadOnlyList<string> names) => names.Count switch
     {

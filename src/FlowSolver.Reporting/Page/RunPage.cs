@@ -99,15 +99,15 @@ public static class RunPage
         var numbers = new List<KeyNumber>();
         var findings = RunFindings.Of(result, labels);
         if (findings.Where(finding => finding.Worst is not null).MaxBy(finding => finding.Worst!.DistanceToExact!.Value.Distance) is { } worst)
-            numbers.Add(new KeyNumber("largest W2 to the exact flow", worst.Worst!.DistanceToExact!.Value.Distance, labels.Length, $"{worst.Method}, t = {RunFindings.Time(worst.Worst.Time, labels)}"));
+            numbers.Add(new KeyNumber("largest W2 to the exact flow", worst.Worst!.DistanceToExact!.Value.Distance, labels.Length, $"{worst.Method}, {RunFindings.AtTime(worst.Worst.Time, labels)}"));
         if (findings.Where(finding => finding.Worst is not null && !finding.IsFailed).MinBy(finding => finding.Worst!.DistanceToExact!.Value.Distance) is { } best && findings.Count > 1)
-            numbers.Add(new KeyNumber("closest method, at its worst", best.Worst!.DistanceToExact!.Value.Distance, labels.Length, $"{best.Method}, t = {RunFindings.Time(best.Worst.Time, labels)}"));
+            numbers.Add(new KeyNumber("closest method, at its worst", best.Worst!.DistanceToExact!.Value.Distance, labels.Length, $"{best.Method}, {RunFindings.AtTime(best.Worst.Time, labels)}"));
         if (result.GridErrors.Max() is { } grid)
             numbers.Add(new KeyNumber("grid error of the exact flow", grid, labels.Length, "W2, from half the cells"));
         if (result.Budget.Max(row => row.Noise95) is { } noise)
             numbers.Add(new KeyNumber("noise floor", noise, labels.Length, string.Create(CultureInfo.InvariantCulture, $"W2, 95 % point, {result.WalkerCount} walkers")));
         if (result.Series.LastOrDefault(row => row.Method == "exact") is { RelativeEntropy: { } entropy } last)
-            numbers.Add(new KeyNumber("left to equilibrium at the end", entropy, null, $"relative entropy, t = {RunFindings.Time(last.Time, labels)}"));
+            numbers.Add(new KeyNumber("left to equilibrium at the end", entropy, null, $"relative entropy, {RunFindings.AtTime(last.Time, labels)}"));
         if (result.Steps.Where(row => row.DualGap is not null).MaxBy(row => row.DualGap) is { DualGap: { } gap } step)
             numbers.Add(new KeyNumber("largest duality gap of a step", gap, null, string.Create(CultureInfo.InvariantCulture, $"{step.Method}, step {step.Step}")));
         return numbers;
@@ -150,7 +150,7 @@ public static class RunPage
         if (remark.Method is not null)
             place.Add(remark.Method);
         if (remark.Time is { } time)
-            place.Add("t = " + RunFindings.Time(time, labels));
+            place.Add(RunFindings.AtTime(time, labels));
         return place.Count == 0 ? remark.Text : string.Join(", ", place) + ": " + remark.Text;
     }
 }

@@ -613,7 +613,7 @@
         ctx.globalAlpha = 1;
       }
       const transport = it.transport[Number(mapChoice.value)];
-      if (mapChoice.value !== "" && transport) {
+      if (mapChoice.value !== "" && transport && (transport.method === method.name || !it.densities[transport.method])) {
         ctx.strokeStyle = ctx.fillStyle = css("--walker");
         ctx.lineWidth = 1.2;
         for (let k = 0; k < transport.arrows.length; k += 4) {
@@ -693,6 +693,8 @@
       }
     }
     for (const input of [levelBox, walkerChoice, mapChoice]) input.addEventListener("change", draw);
+    // Arrows start from the density of their own time: go there.
+    mapChoice.addEventListener("change", () => { if (mapChoice.value !== "") goToTime(it.transport[Number(mapChoice.value)].from); });
     onTime.push(draw);
     onVisible.push(draw);
     redraws.push(draw);

@@ -97,6 +97,7 @@ public sealed class PageTests : IDisposable
     public void Verdict_NamesTheFurthestMethodTheAmountAndTheCause()
     {
         var verdict = RunFindings.Verdict(SampleRuns.Line(), SampleRuns.Labels);
+        verdict = verdict with { Headline = verdict.Headline.Replace('\u00a0', ' ') };
         Assert.Equal(VerdictTone.Attention, verdict.Tone);
         var worst = SampleRuns.Line().Series.Where(row => row.Method != "exact").MaxBy(row => row.DistanceToExact!.Value.Distance)!;
         Assert.StartsWith($"{worst.Method} is furthest off: {Numbers.Short(worst.DistanceToExact!.Value.Distance, 3)} µm from the exact flow at t = {Numbers.Short(worst.Time)} s (", verdict.Headline, StringComparison.Ordinal);
@@ -126,7 +127,7 @@ public sealed class PageTests : IDisposable
         var verdict = RunFindings.Verdict(failed, SampleRuns.Labels);
         Assert.Equal(VerdictTone.Failed, verdict.Tone);
         Assert.Equal("jko could not be trusted to the end. The rest stands.", verdict.Headline);
-        Assert.StartsWith("jko failed at t = 0.4 s: The gap of a step was 0.01.", verdict.Reasons[0], StringComparison.Ordinal);
+        Assert.StartsWith("jko failed at t = 0.4 s: The gap of a step was 0.01.", verdict.Reasons[0].Replace('\u00a0', ' '), StringComparison.Ordinal);
         Assert.Equal(VerdictTone.Failed, RunFindings.Verdict(SampleRuns.Line() with { Interrupted = true }, SampleRuns.Labels).Tone);
     }
 
