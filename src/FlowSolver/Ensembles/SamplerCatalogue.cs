@@ -5,6 +5,8 @@ public static class SamplerCatalogue
 {
     private static readonly Sampler[] Rows =
     [
+        new UnadjustedLangevin(),
+        new ProximalLangevin(),
     ];
 
     /// <summary>All samplers, in the order in which tables and figures show them.</summary>

@@ -1,0 +1,172 @@
+using System.Runtime.CompilerServices;
+using FlowSolver.Ensembles.RandomStreams;
+using FlowSolver.Foundation;
+using FlowSolver.Problems;
+using FlowSolver.Schemes.Splitting;
+
+namespace FlowSolver.Ensembles;
+
+/// <summary>
+/// A sampler whose step is a recipe of maps and Gaussian noise. The scheme that runs the same recipe on the grid carries exactly its law, so that the
+/// two may differ by sampling noise only.
+/// </summary>
+/// <remarks>
+/// Walls: noise and explicit moves are reflected; proximal points and characteristics stop at a wall that V pushes into. Circles wrap.
+/// Refused: potentials with jumps in one dimension, which no gradient sees.
+/// </remarks>
+public abstract class RecipeSampler : Sampler
+{
+    /// <summary>The step.</summary>
+    public abstract SplitRecipe Recipe { get; }
+
+    /// <inheritdoc/>
+    /// <exception cref="InputException">V has a jump, or the start cannot be drawn.</exception>
+    public override EnsembleRun Begin(Problem problem, int walkers, ulong seed, WorkerTeam team)
+    {
+        ArgumentNullException.ThrowIfNull(problem);
+        RefuseJumps(problem, Traits.Name);
+        return new RecipeRun(Recipe, problem, walkers, seed, team);
+    }
+
+    internal static void RefuseJumps(Problem problem, string sampler)
+    {
+        if (problem.Dimension != 1 || problem.Potential.IsSmooth)
+            return;
+        foreach (var kink in problem.Potential.FindKinks(problem.Domain.X))
+        {
+            if (kink.Jump != 0)
+            {
+                throw new InputException(new InputFault(
+                    FormattableString.Invariant($"The potential jumps by {kink.Jump} at x = {kink.Position}; the sampler {sampler} follows derivatives and cannot see a jump."),
+                    "Replace the jump by a steep slope, or leave the sampler out.", Key: "energy.potential"));
+            }
+        }
+    }
+}
+
+/// <summary>Runs a recipe.</summary>
+internal sealed class RecipeRun : TiledRun
+{
+    private readonly SplitPart[] parts;
+    private readonly ProximalMap? proximal;
+    private readonly CharacteristicMap? characteristic;
+    private readonly BlowUpWatch watch;
+    private readonly double[] deviations;
+    private readonly double[] times;
+    private readonly double longestExplicit;
+    private double warnedStep = double.NaN;
+
+    public RecipeRun(SplitRecipe recipe, Problem problem, int walkers, ulong seed, WorkerTeam team, int tilesInBlock = 32)
+        : base(problem, walkers, seed, team, tilesInBlock)
+    {
+        parts = [.. recipe.Parts];
+        deviations = new double[parts.Length];
+        times = new double[parts.Length];
+        foreach (var part in parts)
+        {
+            if (part.Map == TransportMap.Proximal)
+                proximal ??= new ProximalMap(problem.Potential, problem.Domain);
+            if (part.Map == TransportMap.Characteristic)
+                characteristic ??= new CharacteristicMap(problem.Potential, problem.Domain);
+            if (part.Map == TransportMap.Gradient)
+                longestExplicit = Math.Max(longestExplicit, part.Fraction);
+        }
+
+        watch = new BlowUpWatch(problem, longestExplicit > 0 && problem.Potential.IsSmooth ? CurvatureSurvey.Of(problem.Potential, problem.Domain) : null);
+    }
+
+    protected override EnsembleReport AdvanceCore(double step)
+    {
+        for (var p = 0; p < parts.Length; p++)
+        {
+            times[p] = Problem.Mobility * parts[p].Fraction * step;
+            deviations[p] = Math.Sqrt(2 * Problem.Temperature * times[p]);
+        }
+
+        var outcomes = RunTiles();
+        var (failure, warning) = watch.Judge(outcomes, StepsTaken + 1, step, Problem.Mobility * longestExplicit * step, X, Y);
+        return new EnsembleReport(failure, warning ?? UniquenessWarning(step));
+    }
+
+    private string? UniquenessWarning(double step)
+    {
+        if (proximal is null || step == warnedStep)
+            return null;
+        warnedStep = step;
+        var longest = 0.0;
+        for (var p = 0; p < parts.Length; p++)
+            longest = parts[p].Map == TransportMap.Proximal ? Math.Max(longest, times[p]) : longest;
+        return proximal.IsUnique(longest)
+            ? null
+            : FormattableString.Invariant($"The proximal step of {longest:g4} is too long for a unique minimiser: times the least curvature of V, {proximal.LeastCurvature:g4}, it must stay above -1. The minimiser found may not be the lowest.");
+    }
+
+    [SkipLocalsInit]
+    protected override void AdvanceTile(int first, int count, Span<double> x, Span<double> y, bool compare, ref BlockOutcome outcome)
+    {
+        Span<double> noise = stackalloc double[TileLength];
+        Span<double> storage = stackalloc double[2 * TileLength];
+        noise = noise[..x.Length];
+        var gradientX = storage[..x.Length];
+        var gradientY = IsPlane ? storage.Slice(TileLength, x.Length) : [];
+        for (var p = 0; p < parts.Length; p++)
+        {
+            switch (parts[p].Map)
+            {
+                case null:
+                    DrawNormals(StreamPurpose.Noise + 2 * (uint)p, first, noise);
+                    AddNoise(FoldX, deviations[p], noise, x);
+                    if (!IsPlane)
+                        break;
+                    DrawNormals(StreamPurpose.Noise + 2 * (uint)p + 1, first, noise);
+                    AddNoise(FoldY, deviations[p], noise, y);
+                    break;
+                case TransportMap.Gradient:
+                    Problem.Potential.Gradient(x, y, gradientX, gradientY);
+                    if (compare)
+                        CompareEnergies(times[p], count, x, y, gradientX, gradientY, ref outcome);
+                    // An explicit move and the noise after it are one pass: the fold in between would not change the law.
+                    var noisy = p + 1 < parts.Length && parts[p + 1].Map is null;
+                    Push(FoldX, p, noisy, 0, first, count, noise, gradientX, x, ref outcome);
+                    if (IsPlane)
+                        Push(FoldY, p, noisy, 1, first, count, noise, gradientY, y, ref outcome);
+                    if (noisy)
+                        p++;
+                    break;
+                case TransportMap.Proximal:
+                    NoteMissed(proximal!.Apply(times[p], x, y, x, y), first, count, ref outcome);
+                    break;
+                default:
+                    NoteMissed(characteristic!.Apply(times[p], x, y, x, y), first, count, ref outcome);
+                    break;
+            }
+        }
+    }
+
+    private void Push(
+        AxisFold fold, int part, bool noisy, uint axis, int first, int count, Span<double> noise, Span<double> gradient, Span<double> x, ref BlockOutcome outcome)
+    {
+        bool thrown;
+        if (noisy)
+        {
+            DrawNormals(StreamPurpose.Noise + 2 * (uint)(part + 1) + axis, first, noise);
+            thrown = MoveWithNoise(fold, times[part], gradient, deviations[part + 1], noise, x);
+        }
+        else
+        {
+            thrown = Move(fold, times[part], gradient, x);
+        }
+
+        if (thrown)
+            CountThrown(fold, times[part], gradient, first, count, ref outcome);
+    }
+
+    private static void NoteMissed(int missed, int first, int count, ref BlockOutcome outcome)
+    {
+        if (missed == 0)
+            return;
+        if (outcome.Missed == 0)
+            outcome.FirstMissed = first;
+        outcome.Missed += Math.Min(missed, count);
+    }
+}
