@@ -1,5 +1,7 @@
+using System.Diagnostics.CodeAnalysis;
 using System.Runtime.InteropServices;
 using System.Runtime.Intrinsics;
+using System.Runtime.Intrinsics.X86;
 using FlowSolver.Foundation;
 
 namespace FlowSolver.Schemes.ExactFlow;
@@ -17,16 +19,21 @@ internal sealed unsafe class ChebyshevPropagator
 {
     private const int Lane = 8;
     private const int Margin = 8;
+    // Eight levels a pass leave memory far behind arithmetic; the cache share is most of a core's second level.
+    private const int MostLevels = 8;
+    private const double CacheShare = 800e3;
     private readonly Generator generator;
     private readonly WorkerTeam team;
     private readonly int nx;
     private readonly int ny;
     private readonly int stride;
+    private readonly int pitch;
     private readonly int vectors;
     private readonly bool periodicX;
     private readonly bool periodicY;
     private readonly int[] blockStart;
     private readonly int mostLevels;
+    private readonly int chunkWidth;
     // 2B by its five diagonals as seen from the receiving cell, in rows of `stride` numbers with a margin on both sides.
     private readonly double* center;
     private readonly double* fromLeft;
@@ -38,6 +45,9 @@ internal sealed unsafe class ChebyshevPropagator
     private readonly double* sum;
     // Keeps the memory behind the pointers.
     private readonly double[] memory;
+    private readonly double[] rowBound;
+    private readonly Action<int> boundRow;
+    private readonly Action<int> fillRow;
     private readonly Action<int> copyIn;
     private readonly Action<int> firstProduct;
     private readonly Action<int> blockLevels;
@@ -45,8 +55,10 @@ internal sealed unsafe class ChebyshevPropagator
     private readonly Action<int> copyOut;
     private double[] coefficients = [];
     private double[] density = [];
+    private double rateCap;
     private double bound;
     private int level;
+    private int lastOrder;
     private int levels;
 
     public ChebyshevPropagator(Generator generator, WorkerTeam team)
@@ -59,17 +71,21 @@ internal sealed unsafe class ChebyshevPropagator
         periodicY = grid.Y is { IsPeriodic: true };
         vectors = (nx + Lane - 1) / Lane;
         stride = vectors * Lane + 2 * Margin;
-        // Rows in the cache at once: one a level and two more, of eight arrays, within about 0.7 MB.
-        var fitting = (int)(700e3 / (8.0 * sizeof(double) * stride)) - 2;
-        mostLevels = Math.Clamp(Math.Min(fitting, ny / 4), 1, 8);
-        var blocks = Math.Max(1, ny / (4 * mostLevels));
+        // Very wide rows are also cut along x, each level a vector further to the left, so that all levels still fit the cache; across the seam
+        // of a periodic axis that does not work, and fewer levels must do.
+        var levelsThatFit = (int)(CacheShare / (2.0 * 8 * sizeof(double) * stride));
+        mostLevels = Math.Clamp(Math.Min(periodicX ? levelsThatFit : MostLevels, ny / 4), 1, MostLevels);
+        var chunk = (int)(CacheShare / (2.0 * 8 * sizeof(double) * mostLevels)) - Lane * mostLevels;
+        chunkWidth = periodicX || vectors * Lane <= chunk + chunk / 2 ? vectors * Lane : chunk / Lane * Lane;
+        var blocks = Math.Max(1, Math.Max(Math.Min(4, ny / (4 * mostLevels)), ny / 128));
         blockStart = new int[blocks + 1];
         for (var b = 0; b <= blocks; b++)
             blockStart[b] = (int)((long)ny * b / blocks);
-        var size = stride * ny + Lane;
-        memory = GC.AllocateArray<double>(checked(8 * size + Lane), pinned: true);
+        // The eight arrays alternate row by row, so that a band of rows is one stretch of memory and fits a cache of few ways.
+        pitch = 8 * stride;
+        memory = GC.AllocateArray<double>(checked(pitch * ny + Lane), pinned: true);
         var origin = (double*)((Marshal.UnsafeAddrOfPinnedArrayElement(memory, 0) + 63) & ~(nint)63);
-        double* Part(int index) => origin + (long)index * size + Margin;
+        double* Part(int index) => origin + (long)index * stride + Margin;
         center = Part(0);
         fromLeft = Part(1);
         fromRight = Part(2);
@@ -78,6 +94,9 @@ internal sealed unsafe class ChebyshevPropagator
         even = Part(5);
         odd = Part(6);
         sum = Part(7);
+        rowBound = new double[ny];
+        boundRow = BoundRow;
+        fillRow = FillRow;
         copyIn = CopyIn;
         firstProduct = FirstProduct;
         blockLevels = BlockLevels;
@@ -91,53 +110,64 @@ internal sealed unsafe class ChebyshevPropagator
     /// </summary>
     public void SetRates(double cap)
     {
-        var right = generator.RateRight;
-        var left = generator.RateLeft;
-        var up = generator.RateUp;
-        var down = generator.RateDown;
+        rateCap = cap;
+        team.Run(ny, boundRow);
         bound = 0;
-        for (var pass = 0; pass < 2; pass++)
-        {
-            var factor = pass == 0 ? 0 : 4 / bound;
-            for (var row = 0; row < ny; row++)
-            {
-                for (var i = 0; i < nx; i++)
-                {
-                    var cell = row * nx + i;
-                    var at = (long)row * stride + i;
-                    var leftCell = i == 0 ? cell + nx - 1 : cell - 1;
-                    var rightCell = i == nx - 1 ? cell - nx + 1 : cell + 1;
-                    var (outRight, inRight) = Capped(right[cell], left[rightCell], cap);
-                    var (inLeft, outLeft) = Capped(right[leftCell], left[cell], cap);
-                    var exit = outRight + outLeft;
-                    var coupling = Math.Sqrt(outRight) * Math.Sqrt(inRight) + Math.Sqrt(inLeft) * Math.Sqrt(outLeft);
-                    if (pass == 1)
-                        (fromLeft[at], fromRight[at]) = (factor * inLeft, factor * inRight);
-                    if (up.Length > 0)
-                    {
-                        var belowCell = row == 0 ? cell + (ny - 1) * nx : cell - nx;
-                        var aboveCell = row == ny - 1 ? cell - (ny - 1) * nx : cell + nx;
-                        var (outUp, inAbove) = Capped(up[cell], down[aboveCell], cap);
-                        var (inBelow, outDown) = Capped(up[belowCell], down[cell], cap);
-                        exit += outUp + outDown;
-                        coupling += Math.Sqrt(outUp) * Math.Sqrt(inAbove) + Math.Sqrt(inBelow) * Math.Sqrt(outDown);
-                        if (pass == 1)
-                            (fromBelow[at], fromAbove[at]) = (factor * inBelow, factor * inAbove);
-                    }
+        foreach (var row in rowBound)
+            bound = Math.Max(bound, row * (1 + 1e-12));
+        team.Run(ny, fillRow);
+    }
 
-                    if (pass == 0)
-                        bound = Math.Max(bound, (exit + coupling) * (1 + 1e-12));
-                    else
-                        center[at] = 2 - factor * exit;
-                }
-            }
+    // Gershgorin's circles of the symmetric form: exits and couplings.
+    private void BoundRow(int row)
+    {
+        var largest = 0.0;
+        for (var i = 0; i < nx; i++)
+        {
+            var (exit, inLeft, outLeft, inRight, outRight, inBelow, outBelow, inAbove, outAbove) = RatesAt(row, i);
+            largest = Math.Max(largest, exit + Math.Sqrt(inLeft) * Math.Sqrt(outLeft) + Math.Sqrt(inRight) * Math.Sqrt(outRight)
+                + Math.Sqrt(inBelow) * Math.Sqrt(outBelow) + Math.Sqrt(inAbove) * Math.Sqrt(outAbove));
+        }
+
+        rowBound[row] = largest;
+    }
+
+    private void FillRow(int row)
+    {
+        var factor = 4 / bound;
+        for (var i = 0; i < nx; i++)
+        {
+            var at = (long)row * pitch + i;
+            var (exit, inLeft, _, inRight, _, inBelow, _, inAbove, _) = RatesAt(row, i);
+            center[at] = 2 - factor * exit;
+            fromLeft[at] = factor * inLeft;
+            fromRight[at] = factor * inRight;
+            fromBelow[at] = factor * inBelow;
+            fromAbove[at] = factor * inAbove;
         }
     }
 
-    private static (double, double) Capped(double forward, double back, double cap)
+    private (double Exit, double InLeft, double OutLeft, double InRight, double OutRight, double InBelow, double OutBelow, double InAbove, double OutAbove)
+        RatesAt(int row, int i)
+    {
+        var cell = row * nx + i;
+        var leftCell = i == 0 ? cell + nx - 1 : cell - 1;
+        var rightCell = i == nx - 1 ? cell - nx + 1 : cell + 1;
+        var (outRight, inRight) = Capped(generator.RateRight[cell], generator.RateLeft[rightCell]);
+        var (inLeft, outLeft) = Capped(generator.RateRight[leftCell], generator.RateLeft[cell]);
+        if (generator.RateUp.Length == 0)
+            return (outRight + outLeft, inLeft, outLeft, inRight, outRight, 0, 0, 0, 0);
+        var belowCell = row == 0 ? cell + (ny - 1) * nx : cell - nx;
+        var aboveCell = row == ny - 1 ? cell - (ny - 1) * nx : cell + nx;
+        var (outAbove, inAbove) = Capped(generator.RateUp[cell], generator.RateDown[aboveCell]);
+        var (inBelow, outBelow) = Capped(generator.RateUp[belowCell], generator.RateDown[cell]);
+        return (outRight + outLeft + outAbove + outBelow, inLeft, outLeft, inRight, outRight, inBelow, outBelow, inAbove, outAbove);
+    }
+
+    private (double Forward, double Back) Capped(double forward, double back)
     {
         var larger = Math.Max(forward, back);
-        return larger <= cap ? (forward, back) : (forward * (cap / larger), back * (cap / larger));
+        return larger <= rateCap ? (forward, back) : (forward * (rateCap / larger), back * (rateCap / larger));
     }
 
     /// <summary>Number of products that a step would take, near enough for a choice.</summary>
@@ -164,6 +194,7 @@ internal sealed unsafe class ChebyshevPropagator
         if (count == 1)
             return 0;
         team.Run(blockStart.Length - 1, firstProduct);
+        lastOrder = count - 1;
         for (level = 1; level < count - 1; level += levels)
         {
             levels = Math.Min(mostLevels, count - 1 - level);
@@ -180,15 +211,15 @@ internal sealed unsafe class ChebyshevPropagator
     {
         for (var row = blockStart[block]; row < blockStart[block + 1]; row++)
         {
-            density.AsSpan(row * nx, nx).CopyTo(new Span<double>(even + (long)row * stride, nx));
-            CloseRow(even + (long)row * stride);
+            density.AsSpan(row * nx, nx).CopyTo(new Span<double>(even + (long)row * pitch, nx));
+            CloseRow(even + (long)row * pitch);
         }
     }
 
     private void CopyOut(int block)
     {
         for (var row = blockStart[block]; row < blockStart[block + 1]; row++)
-            new Span<double>(sum + (long)row * stride, nx).CopyTo(density.AsSpan(row * nx, nx));
+            new Span<double>(sum + (long)row * pitch, nx).CopyTo(density.AsSpan(row * nx, nx));
     }
 
     // y_1 = By_0, and the sum begins with c_0 y_0 + c_1 y_1.
@@ -196,17 +227,18 @@ internal sealed unsafe class ChebyshevPropagator
     {
         for (var row = blockStart[block]; row < blockStart[block + 1]; row++)
         {
-            var at = (long)row * stride;
+            var at = (long)row * pitch;
             var next = odd + at;
             new Span<double>(next - Margin, stride).Clear();
-            new Span<double>(sum + at, vectors * Lane).Clear();
-            Product(row, next, even, 0);
+            Product(row, next, even, 0, 0, 0, vectors * Lane);
             var here = even + at;
             for (var i = 0; i < nx; i++)
             {
                 next[i] *= 0.5;
                 sum[at + i] = coefficients[0] * here[i] + coefficients[1] * next[i];
             }
+
+            new Span<double>(sum + at + nx, vectors * Lane - nx).Clear();
 
             CloseRow(next);
         }
@@ -220,13 +252,16 @@ internal sealed unsafe class ChebyshevPropagator
         var to = blockStart[block + 1];
         var shrinkLow = from > 0 || periodicY ? 1 : 0;
         var shrinkHigh = to < ny || periodicY ? 1 : 0;
-        for (var front = from; front < to + levels - 1; front++)
+        for (var chunk = 0; chunk < vectors * Lane; chunk += chunkWidth)
         {
-            for (var k = 1; k <= levels; k++)
+            for (var front = from; front < to + levels - 1; front++)
             {
-                var row = front - (k - 1);
-                if (row >= from + shrinkLow * (k - 1) && row < to - shrinkHigh * (k - 1))
-                    NextLevel(row, level + k);
+                for (var k = 1; k <= levels; k++)
+                {
+                    var row = front - (k - 1);
+                    if (row >= from + shrinkLow * (k - 1) && row < to - shrinkHigh * (k - 1))
+                        NextLevel(row, k, chunk);
+                }
             }
         }
     }
@@ -237,19 +272,33 @@ internal sealed unsafe class ChebyshevPropagator
         if (block == 0 && !periodicY)
             return;
         var seam = blockStart[block];
-        for (var k = 2; k <= levels; k++)
+        for (var chunk = 0; chunk < vectors * Lane; chunk += chunkWidth)
         {
-            for (var row = seam - (k - 1); row < seam + (k - 1); row++)
-                NextLevel(row < 0 ? row + ny : row, level + k);
+            for (var k = 2; k <= levels; k++)
+            {
+                for (var row = seam - (k - 1); row < seam + (k - 1); row++)
+                    NextLevel(row < 0 ? row + ny : row, k, chunk);
+            }
         }
     }
 
-    private void NextLevel(int row, int order)
+    // Level k of the round in one row, for the chunk of columns shifted to the left by a vector a level.
+    private void NextLevel(int row, int k, int chunk)
     {
+        var end = vectors * Lane;
+        var from = chunk == 0 ? 0 : chunk - Lane * (k - 1);
+        var to = chunk + chunkWidth >= end ? end : chunk + chunkWidth - Lane * (k - 1);
+        var order = level + k;
         var target = (order & 1) == 0 ? even : odd;
         var source = (order & 1) == 0 ? odd : even;
-        var next = target + (long)row * stride;
-        Product(row, next, source, coefficients[order]);
+        var next = target + (long)row * pitch;
+        // The sum takes two levels at a time, which halves its traffic; the last one alone when their number is even.
+        if ((order & 1) == 1)
+            Product(row, next, source, coefficients[order - 1], coefficients[order], from, to);
+        else if (order == lastOrder)
+            Product(row, next, source, 0, coefficients[order], from, to);
+        else
+            Product(row, next, source, 0, 0, from, to);
         CloseRow(next);
     }
 
@@ -261,66 +310,99 @@ internal sealed unsafe class ChebyshevPropagator
         row[nx] = row[0];
     }
 
-    // next ← 2B·here − next, sum ← sum + weight·next, for one row.
-    private void Product(int row, double* next, double* source, double weight)
+    // next ← 2B·here − next, sum ← sum + weightHere·here + weightNext·next, for one row.
+    private void Product(int row, double* next, double* source, double weightHere, double weightNext, int from, int to)
     {
-        var at = (long)row * stride;
+        var at = (long)row * pitch;
         var here = source + at;
+        var total = weightNext == 0 ? null : sum + at;
         if (ny == 1)
         {
-            LineProduct(next, here, weight);
+            LineProduct(next, here, total, weightHere, weightNext, from, to);
             return;
         }
 
-        var below = row > 0 ? here - stride : periodicY ? source + (long)(ny - 1) * stride : here;
-        var above = row < ny - 1 ? here + stride : periodicY ? source : here;
+        var below = row > 0 ? here - pitch : periodicY ? source + (long)(ny - 1) * pitch : here;
+        var above = row < ny - 1 ? here + pitch : periodicY ? source : here;
+        if (Avx512F.IsSupported)
+            WideProduct(next, here, below, above, total, at, weightHere, weightNext, from, to);
+        else
+            NarrowProduct(next, here, below, above, total, at, weightHere, weightNext, from, to);
+    }
+
+    // The neighbours along the row are cut from the vectors before, at and after it: loads that straddle cache lines cost twice.
+    private void WideProduct(
+        double* next, double* here, double* below, double* above, double* total, long at, double weightHere, double weightNext, int from, int to)
+    {
         var c = center + at;
         var l = fromLeft + at;
         var r = fromRight + at;
         var b = fromBelow + at;
         var a = fromAbove + at;
-        var total = sum + at;
-        var end = vectors * Lane;
-        if (Vector512.IsHardwareAccelerated)
+        var scaleHere = Vector512.Create(weightHere);
+        var scaleNext = Vector512.Create(weightNext);
+        var before = Vector512.LoadAligned(here + from - Lane);
+        var middle = Vector512.LoadAligned(here + from);
+        for (var i = from; i < to; i += Lane)
         {
-            var factor = Vector512.Create(weight);
-            for (var i = 0; i < end; i += 8)
+            var after = Vector512.LoadAligned(here + i + Lane);
+            var value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(c + i), middle, -Vector512.LoadAligned(next + i));
+            value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(l + i), Shifted(middle, before, 7), value);
+            value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(r + i), Shifted(after, middle, 1), value);
+            value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(b + i), Vector512.LoadAligned(below + i), value);
+            value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(a + i), Vector512.LoadAligned(above + i), value);
+            value.StoreAligned(next + i);
+            if (total != null)
             {
-                var value = Vector512.MultiplyAddEstimate(Vector512.Load(c + i), Vector512.Load(here + i), -Vector512.Load(next + i));
-                value = Vector512.MultiplyAddEstimate(Vector512.Load(l + i), Vector512.Load(here + i - 1), value);
-                value = Vector512.MultiplyAddEstimate(Vector512.Load(r + i), Vector512.Load(here + i + 1), value);
-                value = Vector512.MultiplyAddEstimate(Vector512.Load(b + i), Vector512.Load(below + i), value);
-                value = Vector512.MultiplyAddEstimate(Vector512.Load(a + i), Vector512.Load(above + i), value);
-                value.Store(next + i);
-                Vector512.MultiplyAddEstimate(factor, value, Vector512.Load(total + i)).Store(total + i);
+                var added = Avx512F.FusedMultiplyAdd(scaleHere, middle, Vector512.LoadAligned(total + i));
+                Avx512F.FusedMultiplyAdd(scaleNext, value, added).StoreAligned(total + i);
             }
 
-            return;
-        }
-
-        var scale = Vector256.Create(weight);
-        for (var i = 0; i < end; i += 4)
-        {
-            var value = Vector256.MultiplyAddEstimate(Vector256.Load(c + i), Vector256.Load(here + i), -Vector256.Load(next + i));
-            value = Vector256.MultiplyAddEstimate(Vector256.Load(l + i), Vector256.Load(here + i - 1), value);
-            value = Vector256.MultiplyAddEstimate(Vector256.Load(r + i), Vector256.Load(here + i + 1), value);
-            value = Vector256.MultiplyAddEstimate(Vector256.Load(b + i), Vector256.Load(below + i), value);
-            value = Vector256.MultiplyAddEstimate(Vector256.Load(a + i), Vector256.Load(above + i), value);
-            value.Store(next + i);
-            Vector256.MultiplyAddEstimate(scale, value, Vector256.Load(total + i)).Store(total + i);
+            before = middle;
+            middle = after;
         }
     }
 
-    private void LineProduct(double* next, double* here, double weight)
+    private static Vector512<double> Shifted(Vector512<double> high, Vector512<double> low, [ConstantExpected] byte lanes)
+        => Avx512F.AlignRight64(high.AsInt64(), low.AsInt64(), lanes).AsDouble();
+
+    private void NarrowProduct(
+        double* next, double* here, double* below, double* above, double* total, long at, double weightHere, double weightNext, int from, int to)
     {
-        var factor = Vector512.Create(weight);
-        for (var i = 0; i < vectors * Lane; i += 8)
+        var c = center + at;
+        var l = fromLeft + at;
+        var r = fromRight + at;
+        var b = fromBelow + at;
+        var a = fromAbove + at;
+        var scaleHere = Vector256.Create(weightHere);
+        var scaleNext = Vector256.Create(weightNext);
+        for (var i = from; i < to; i += 4)
         {
-            var value = Vector512.MultiplyAddEstimate(Vector512.Load(center + i), Vector512.Load(here + i), -Vector512.Load(next + i));
-            value = Vector512.MultiplyAddEstimate(Vector512.Load(fromLeft + i), Vector512.Load(here + i - 1), value);
-            value = Vector512.MultiplyAddEstimate(Vector512.Load(fromRight + i), Vector512.Load(here + i + 1), value);
+            var middle = Vector256.Load(here + i);
+            var value = Vector256.FusedMultiplyAdd(Vector256.Load(c + i), middle, -Vector256.Load(next + i));
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(l + i), Vector256.Load(here + i - 1), value);
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(r + i), Vector256.Load(here + i + 1), value);
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(b + i), Vector256.Load(below + i), value);
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(a + i), Vector256.Load(above + i), value);
             value.Store(next + i);
-            Vector512.MultiplyAddEstimate(factor, value, Vector512.Load(sum + i)).Store(sum + i);
+            if (total != null)
+                Vector256.FusedMultiplyAdd(scaleNext, value, Vector256.FusedMultiplyAdd(scaleHere, middle, Vector256.Load(total + i))).Store(total + i);
+        }
+    }
+
+    private void LineProduct(double* next, double* here, double* total, double weightHere, double weightNext, int from, int to)
+    {
+        var scaleHere = Vector256.Create(weightHere);
+        var scaleNext = Vector256.Create(weightNext);
+        for (var i = from; i < to; i += 4)
+        {
+            var middle = Vector256.Load(here + i);
+            var value = Vector256.FusedMultiplyAdd(Vector256.Load(center + i), middle, -Vector256.Load(next + i));
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(fromLeft + i), Vector256.Load(here + i - 1), value);
+            value = Vector256.FusedMultiplyAdd(Vector256.Load(fromRight + i), Vector256.Load(here + i + 1), value);
+            value.Store(next + i);
+            if (total != null)
+                Vector256.FusedMultiplyAdd(scaleNext, value, Vector256.FusedMultiplyAdd(scaleHere, middle, Vector256.Load(total + i))).Store(total + i);
         }
     }
 }

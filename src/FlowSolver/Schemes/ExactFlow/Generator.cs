@@ -164,22 +164,15 @@ public sealed class Generator
         upper[^1] = lower[0];
         pieces.Sample(row, alongX: true);
         var edges = grid.X.IsPeriodic ? grid.Nx : grid.Nx - 1;
-        for (var i = 0; i < edges; i++)
-        {
-            var (forward, back) = Rates(lower[i], upper[i], pieces.LogMean(i, lower[i], upper[i]), grid.X.Width);
-            right[first + i] = forward;
-            left[i == grid.Nx - 1 ? first : first + i + 1] = back;
-        }
-
+        var back = new double[grid.Nx];
+        pieces.Rates(lower, upper, right.AsSpan(first, grid.Nx), back, edges);
+        back.AsSpan(0, grid.Nx - 1).CopyTo(left.AsSpan(first + 1));
+        left[first] = back[^1];
         if (grid.Y is null || (row == grid.Ny - 1 && !grid.Y.IsPeriodic))
             return;
         var next = row == grid.Ny - 1 ? 0 : first + grid.Nx;
         pieces.Sample(row, alongX: false);
-        for (var i = 0; i < grid.Nx; i++)
-        {
-            var above = Problem.CellPotential[next + i];
-            (up[first + i], down[next + i]) = Rates(lower[i], above, pieces.LogMean(i, lower[i], above), grid.Y.Width);
-        }
+        pieces.Rates(lower, Problem.CellPotential.AsSpan(next, grid.Nx), up.AsSpan(first, grid.Nx), down.AsSpan(next, grid.Nx), grid.Nx);
     }
 
     private (double Forward, double Back) Rates(double potential, double neighbour, double logMean, double width)

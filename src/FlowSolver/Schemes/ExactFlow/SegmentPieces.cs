@@ -1,3 +1,4 @@
+using FlowSolver.Foundation;
 using FlowSolver.Grids;
 using FlowSolver.Problems;
 
@@ -22,6 +23,10 @@ internal sealed class SegmentPieces
     private readonly double[][] values;
     private readonly double[][] slopes;
     private readonly double[] unused;
+    // What the pieces of all segments of the row are made of: V at their ends in temperatures above the middle of the segment's two ends, less the
+    // largest of the segment, and the exponentials.
+    private readonly double[][] exponents;
+    private readonly double[][] exponentials;
     private double width;
 
     public SegmentPieces(Problem problem, Grid grid)
@@ -34,6 +39,8 @@ internal sealed class SegmentPieces
         values = Rows(smooth ? 4 : TangentPieces);
         slopes = Rows(smooth ? 0 : TangentPieces);
         unused = new double[smooth || grid.Y is null ? 0 : grid.Nx];
+        exponents = Rows(smooth ? 6 : 2 * TangentPieces + 2);
+        exponentials = Rows(exponents.Length);
     }
 
     private double[][] Rows(int count)
@@ -99,49 +106,89 @@ internal sealed class SegmentPieces
         return share == 0.5 ? axis.Interval.To : axis.Interval.From + (share - 0.5) * axis.Width;
     }
 
-    /// <summary>log ⟨e^((V − (first + last)/2)/T)⟩ over the segment that starts at cell <paramref name="i"/> of the row sampled last.</summary>
-    /// <param name="i">Cell in the row.</param>
-    /// <param name="first">V at its centre.</param>
-    /// <param name="last">V at the centre of its neighbour.</param>
-    public double LogMean(int i, double first, double last)
+    /// <summary>
+    /// The rates across the segments sampled last: forward = s·e^((first − middle)/T)/⟨e^((V − middle)/T)⟩ and back the same with last, s = MT/h².
+    /// </summary>
+    /// <param name="first">V at the centres where the segments start.</param>
+    /// <param name="last">V at the centres where they end.</param>
+    /// <param name="forward">Receives the rates from the first to the last centre.</param>
+    /// <param name="back">Receives the rates back.</param>
+    /// <param name="count">Number of segments.</param>
+    public void Rates(ReadOnlySpan<double> first, ReadOnlySpan<double> last, Span<double> forward, Span<double> back, int count)
+    {
+        for (var i = 0; i < count; i++)
+            SetExponents(i, first[i], last[i]);
+        for (var k = 0; k < exponents.Length; k++)
+            VectorMath.Exp(exponents[k].AsSpan(0, count), exponentials[k].AsSpan(0, count));
+        var scale = problem.Mobility * problem.Temperature / (width * width);
+        for (var i = 0; i < count; i++)
+        {
+            double mean;
+            if (smooth)
+            {
+                mean = 0.25 * (Mean(0, 1, i) + Mean(1, 2, i) + Mean(3, 4, i) + Mean(4, 5, i));
+            }
+            else
+            {
+                mean = 0;
+                for (var k = 0; k < TangentPieces; k++)
+                    mean += Mean(2 * k + 1, 2 * k + 2, i);
+                mean /= TangentPieces;
+            }
+
+            forward[i] = scale * exponentials[0][i] / mean;
+            back[i] = scale * exponentials[^1][i] / mean;
+        }
+    }
+
+    // First and last entry: the two ends of the segment. Between them, smooth: the quarter points with the middle twice; otherwise the ends of each piece.
+    private void SetExponents(int i, double first, double last)
     {
         var middle = 0.5 * first + 0.5 * last;
         var inverse = 1 / problem.Temperature;
-        if (!smooth)
-            return TangentLogMean(i, middle, inverse);
-        var a0 = (first - middle) * inverse;
-        var a4 = (last - middle) * inverse;
-        // Where V is not finite between two centres at which it is, it is taken linear between them.
-        var a1 = FiniteOr((values[0][i] - middle) * inverse, 0.5 * a0);
-        var a2 = FiniteOr((values[1][i] - middle) * inverse, 0);
-        var beyond = FiniteOr((values[3][i] - middle) * inverse, 0);
-        var a3 = FiniteOr((values[2][i] - middle) * inverse, 0.5 * a4);
-        var largest = Math.Max(Math.Max(Math.Max(a0, a1), Math.Max(a2, beyond)), Math.Max(a3, a4));
-        var sum = MeanOfExponential(a0, a1, largest) + MeanOfExponential(a1, a2, largest)
-            + MeanOfExponential(beyond, a3, largest) + MeanOfExponential(a3, a4, largest);
-        return largest + Math.Log(0.25 * sum);
-    }
-
-    private double TangentLogMean(int i, double middle, double inverse)
-    {
-        Span<double> low = stackalloc double[TangentPieces];
-        Span<double> high = stackalloc double[TangentPieces];
-        var largest = double.NegativeInfinity;
-        for (var k = 0; k < TangentPieces; k++)
+        var low = (first - middle) * inverse;
+        var high = (last - middle) * inverse;
+        exponents[0][i] = low;
+        exponents[^1][i] = high;
+        if (smooth)
         {
-            var a = FiniteOr((values[k][i] - middle) * inverse, 0);
-            var half = FiniteOr(slopes[k][i] * inverse * width / (2 * TangentPieces), 0);
-            (low[k], high[k]) = (a - half, a + half);
-            largest = Math.Max(largest, Math.Max(low[k], high[k]));
+            // Where V is not finite between two centres at which it is, it is taken linear between them.
+            exponents[1][i] = FiniteOr((values[0][i] - middle) * inverse, 0.5 * low);
+            exponents[2][i] = FiniteOr((values[1][i] - middle) * inverse, 0);
+            exponents[3][i] = FiniteOr((values[3][i] - middle) * inverse, 0);
+            exponents[4][i] = FiniteOr((values[2][i] - middle) * inverse, 0.5 * high);
+        }
+        else
+        {
+            for (var k = 0; k < TangentPieces; k++)
+            {
+                var a = FiniteOr((values[k][i] - middle) * inverse, 0);
+                var half = FiniteOr(slopes[k][i] * inverse * width / (2 * TangentPieces), 0);
+                exponents[2 * k + 1][i] = a - half;
+                exponents[2 * k + 2][i] = a + half;
+            }
         }
 
-        var sum = 0.0;
-        for (var k = 0; k < TangentPieces; k++)
-            sum += MeanOfExponential(low[k], high[k], largest);
-        return largest + Math.Log(sum / TangentPieces);
+        var largest = double.NegativeInfinity;
+        foreach (var row in exponents)
+            largest = Math.Max(largest, row[i]);
+        foreach (var row in exponents)
+            row[i] -= largest;
     }
 
-    /// <summary>The same mean for one segment in one dimension that holds kinks or jumps: the segment is cut at each of them too.</summary>
+    // Mean of e^a over a piece on which a is linear: (e^b − e^a)/(b − a), and where that cancels ½(e^a + e^b)·tanh(d/2)/(d/2), d = b − a, by its series.
+    private double Mean(int from, int to, int i)
+    {
+        var d = exponents[to][i] - exponents[from][i];
+        var (a, b) = (exponentials[from][i], exponentials[to][i]);
+        if (Math.Abs(d) > 0.125)
+            return (b - a) / d;
+        var z = 0.25 * d * d;
+        var series = 1 + z * (-1.0 / 3 + z * (2.0 / 15 + z * (-17.0 / 315 + z * (62.0 / 2835 - z * (1382.0 / 155925)))));
+        return 0.5 * (a + b) * series;
+    }
+
+    /// <summary>log ⟨e^((V − (first + last)/2)/T)⟩ over a segment in one dimension that holds kinks or jumps: it is cut at each of them too.</summary>
     /// <param name="problem">The problem.</param>
     /// <param name="interval">The axis.</param>
     /// <param name="from">Centre at which the segment starts.</param>
