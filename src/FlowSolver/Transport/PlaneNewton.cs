@@ -11,12 +11,20 @@ namespace FlowSolver.Transport;
 /// Newton on the logarithm of the Monge-Ampère equation (G. Loeper, F. Rapetti, C. R. Acad. Sci. Paris 340 (2005) 319-324, with damping): with
 /// R = log b − log a(y + ∇φ) − log det(I + D²φ) the update solves −∇·(b (I + D²φ)⁻¹ ∇δ) = −b (R − mean of R under b). Departures: divergence
 /// form, hence a symmetric system; a floor of 10⁻¹² of the largest weight continues the update harmonically into the tails. Derivatives by
-/// differences of fourth order, even across walls; log a between the cells by the cubic through four neighbours an axis. R is formed from differences
+/// differences of fourth order, even across walls where mass touches them; log a between the cells by the cubic through four neighbours an axis. R is formed from differences
 /// of logarithms, so that densities that differ by 10⁻⁸ still give digits. For normal densities log R is a quadratic and a few steps do.
 /// </remarks>
 internal sealed class PlaneNewton
 {
     private const double Floor = 1e-12;
+
+    // Of the largest density of b: below it the equation fades out, and the potential continues smoothly.
+    private const double Fade = 1e-9;
+
+    // Of the largest density of b: a wall cell with less is treated as an open end, φ running on through the wall. Mirroring φ there would bend it
+    // sharply for the sake of mass that is not there.
+    private const double Open = 1e-5;
+    private const int Ghosts = 2;
     private const double LeastEigenvalue = 0.02;
     private const double MostEigenvalue = 50;
     private const double Tiny = 1e-300;
@@ -26,8 +34,13 @@ internal sealed class PlaneNewton
     private readonly int ny;
     private readonly double widthX;
     private readonly double widthY;
-    private readonly int[] columns;
-    private readonly int[] rows;
+    private readonly int stride;
+    private readonly double[] padded;
+    private readonly double[] slopes;
+    private readonly bool[] openWest;
+    private readonly bool[] openEast;
+    private readonly bool[] openSouth;
+    private readonly bool[] openNorth;
     private readonly int blocks;
     private readonly PlaneElliptic elliptic;
     private readonly double[] logSource;
@@ -42,10 +55,13 @@ internal sealed class PlaneNewton
     private readonly double[] stiffYY;
     private readonly double[] mismatch;
     private readonly double[] partial;
+    private readonly Action<int> paddingJob;
+    private readonly Action<int> slopeJob;
     private readonly Action<int> gradientJob;
     private readonly Action<int> mismatchJob;
     private readonly Action<int> stiffnessJob;
     private double[] current;
+    private double fade;
 
     public PlaneNewton(Grid grid, WorkerTeam team)
     {
@@ -53,8 +69,10 @@ internal sealed class PlaneNewton
         Grid = grid;
         (nx, ny) = (grid.Nx, grid.Ny);
         (widthX, widthY) = (grid.X.Width, grid.Y!.Width);
-        columns = GhostIndices(nx, grid.X.IsPeriodic);
-        rows = GhostIndices(ny, grid.Y.IsPeriodic);
+        stride = nx + 2 * Ghosts;
+        padded = new double[stride * (ny + 2 * Ghosts)];
+        slopes = new double[nx * (ny + 2 * Ghosts)];
+        (openWest, openEast, openSouth, openNorth) = (new bool[ny], new bool[ny], new bool[nx], new bool[nx]);
         blocks = (ny + RowsPerBlock - 1) / RowsPerBlock;
         elliptic = new PlaneElliptic(nx, ny, grid.X.IsPeriodic, grid.Y.IsPeriodic, widthX, widthY, team) { HasCorners = true };
         var cells = grid.CellCount;
@@ -74,6 +92,8 @@ internal sealed class PlaneNewton
         stiffYY = new double[cells];
         mismatch = new double[cells];
         partial = new double[24 * blocks];
+        paddingJob = Pad;
+        slopeJob = Slope;
         gradientJob = Gradient;
         mismatchJob = Mismatch;
         stiffnessJob = Stiffness;
@@ -103,6 +123,12 @@ internal sealed class PlaneNewton
     {
         a.CopyTo(source, 0);
         b.CopyTo(target, 0);
+        var largest = SpanKernels.MaxAbs(target);
+        fade = Fade * largest + 1e-290;
+        for (var row = 0; row < ny; row++)
+            (openWest[row], openEast[row]) = (b[row * nx] < Open * largest, b[row * nx + nx - 1] < Open * largest);
+        for (var i = 0; i < nx; i++)
+            (openSouth[i], openNorth[i]) = (b[i] < Open * largest, b[(ny - 1) * nx + i] < Open * largest);
         for (var i = 0; i < a.Length; i++)
         {
             logSource[i] = Math.Log(Math.Max(a[i], Tiny));
@@ -153,6 +179,9 @@ internal sealed class PlaneNewton
     public void Evaluate(double[] potential)
     {
         current = potential;
+        team.Run(blocks, paddingJob);
+        PadRows();
+        team.Run(blocks, slopeJob);
         team.Run(blocks, gradientJob);
         team.Run(blocks, mismatchJob);
         Residual = SumPartials(0) * widthX * widthY;
@@ -171,7 +200,7 @@ internal sealed class PlaneNewton
         // Mean of R under b, so that the right side adds up to 0 without touching the tails.
         var mean = SumPartials(1) / SumPartials(2);
         for (var i = 0; i < right.Length; i++)
-            right[i] = -target[i] * (mismatch[i] - mean);
+            right[i] = -target[i] * (target[i] / (target[i] + fade)) * (mismatch[i] - mean);
         var largest = SpanKernels.MaxAbs(target);
         for (var i = 0; i < target.Length; i++)
         {
@@ -189,13 +218,13 @@ internal sealed class PlaneNewton
         var (scaleX, scaleY, scaleXY) = (0.5 / (widthX * widthX), 0.5 / (widthY * widthY), 0.125 / (widthX * widthY));
         for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
         {
-            var (here, up) = (row * nx, rows[row + 3] * nx);
+            var (here, up) = (row * nx, (row + 1 < ny ? row + 1 : 0) * nx);
             var alongX = elliptic.RowX(row);
             var alongY = elliptic.RowY(row);
             var corner = elliptic.RowCorner(row);
             for (var i = 0; i < nx; i++)
             {
-                var next = columns[i + 3];
+                var next = i + 1 < nx ? i + 1 : 0;
                 alongX[i] = scaleX * (stiffXX[here + i] + stiffXX[here + next]);
                 alongY[i] = scaleY * (stiffYY[here + i] + stiffYY[up + i]);
                 corner[i] = scaleXY * (stiffXY[here + i] + stiffXY[here + next] + stiffXY[up + i] + stiffXY[up + next]);
@@ -203,18 +232,74 @@ internal sealed class PlaneNewton
         }
     }
 
-    private void Gradient(int block)
+    // Copies φ into the padded field and fills the ghost columns: mirrored, wrapped, or run on by the parabola through three cells.
+    private void Pad(int block)
     {
-        var (scaleX, scaleY) = (1 / (12 * widthX), 1 / (12 * widthY));
-        var phi = current;
         for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
         {
-            var (r0, r1, r3, r4, r2) = (rows[row] * nx, rows[row + 1] * nx, rows[row + 3] * nx, rows[row + 4] * nx, row * nx);
-            for (var i = 0; i < nx; i++)
+            var line = padded.AsSpan((row + Ghosts) * stride, stride);
+            current.AsSpan(row * nx, nx).CopyTo(line[Ghosts..]);
+            if (Grid.X.IsPeriodic)
             {
-                var (c0, c1, c3, c4) = (columns[i], columns[i + 1], columns[i + 3], columns[i + 4]);
-                GradientX[r2 + i] = scaleX * (8 * (phi[r2 + c3] - phi[r2 + c1]) - (phi[r2 + c4] - phi[r2 + c0]));
-                GradientY[r2 + i] = scaleY * (8 * (phi[r3 + i] - phi[r1 + i]) - (phi[r4 + i] - phi[r0 + i]));
+                (line[0], line[1]) = (line[nx], line[nx + 1]);
+                (line[nx + 2], line[nx + 3]) = (line[2], line[3]);
+                continue;
+            }
+
+            (line[1], line[0]) = Beyond(line[2], line[3], line[4], openWest[row]);
+            (line[nx + 2], line[nx + 3]) = Beyond(line[nx + 1], line[nx], line[nx - 1], openEast[row]);
+        }
+    }
+
+    private void PadRows()
+    {
+        for (var i = 0; i < stride; i++)
+        {
+            if (Grid.Y!.IsPeriodic)
+            {
+                (padded[i], padded[stride + i]) = (padded[ny * stride + i], padded[(ny + 1) * stride + i]);
+                (padded[(ny + 2) * stride + i], padded[(ny + 3) * stride + i]) = (padded[2 * stride + i], padded[3 * stride + i]);
+                continue;
+            }
+
+            var column = Math.Clamp(i - Ghosts, 0, nx - 1);
+            (padded[stride + i], padded[i]) =
+                Beyond(padded[2 * stride + i], padded[3 * stride + i], padded[4 * stride + i], openSouth[column]);
+            (padded[(ny + 2) * stride + i], padded[(ny + 3) * stride + i]) =
+                Beyond(padded[(ny + 1) * stride + i], padded[ny * stride + i], padded[(ny - 1) * stride + i], openNorth[column]);
+        }
+    }
+
+    private static (double First, double Second) Beyond(double v0, double v1, double v2, bool open)
+        => open ? (v0 + (2 * (v0 - v1) - (v1 - v2)), v0 + (5 * (v0 - v1) - 3 * (v1 - v2))) : (v0, v1);
+
+    // ∂φ/∂x, on the ghost rows too: the mixed derivative is the slope of this along y.
+    private void Slope(int block)
+    {
+        var scale = 1 / (12 * widthX);
+        var first = block == 0 ? 0 : block * RowsPerBlock + Ghosts;
+        var last = block == blocks - 1 ? ny + 2 * Ghosts : (block + 1) * RowsPerBlock + Ghosts;
+        for (var row = first; row < last; row++)
+        {
+            var line = padded.AsSpan(row * stride, stride);
+            var target = slopes.AsSpan(row * nx, nx);
+            for (var i = 0; i < target.Length; i++)
+                target[i] = scale * (8 * (line[i + 3] - line[i + 1]) - (line[i + 4] - line[i]));
+        }
+    }
+
+    private void Gradient(int block)
+    {
+        var scale = 1 / (12 * widthY);
+        for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
+        {
+            slopes.AsSpan((row + Ghosts) * nx, nx).CopyTo(GradientX.AsSpan(row * nx));
+            var target = GradientY.AsSpan(row * nx, nx);
+            var corner = row * stride + Ghosts;
+            for (var i = 0; i < target.Length; i++)
+            {
+                var at = corner + i;
+                target[i] = scale * (8 * (padded[at + 3 * stride] - padded[at + stride]) - (padded[at + 4 * stride] - padded[at]));
             }
         }
     }
@@ -222,19 +307,19 @@ internal sealed class PlaneNewton
     private void Mismatch(int block)
     {
         var (scaleX, scaleY, mixed) = (1 / (12 * widthX * widthX), 1 / (12 * widthY * widthY), 1 / (12 * widthY));
-        var phi = current;
         double difference = 0, weighted = 0, weight = 0;
         for (var row = block * RowsPerBlock; row < Math.Min(ny, (block + 1) * RowsPerBlock); row++)
         {
-            var (r0, r1, r2, r3, r4) = (rows[row] * nx, rows[row + 1] * nx, row * nx, rows[row + 3] * nx, rows[row + 4] * nx);
             for (var i = 0; i < nx; i++)
             {
-                var (c0, c1, c3, c4) = (columns[i], columns[i + 1], columns[i + 3], columns[i + 4]);
-                var cell = r2 + i;
-                var p = phi[cell];
-                var xx = scaleX * (16 * (phi[r2 + c1] - p + (phi[r2 + c3] - p)) - (phi[r2 + c0] - p + (phi[r2 + c4] - p)));
-                var yy = scaleY * (16 * (phi[r1 + i] - p + (phi[r3 + i] - p)) - (phi[r0 + i] - p + (phi[r4 + i] - p)));
-                var xy = mixed * (8 * (GradientX[r3 + i] - GradientX[r1 + i]) - (GradientX[r4 + i] - GradientX[r0 + i]));
+                var cell = row * nx + i;
+                var at = (row + Ghosts) * stride + Ghosts + i;
+                var p = padded[at];
+                var xx = scaleX * (16 * (padded[at - 1] - p + (padded[at + 1] - p)) - (padded[at - 2] - p + (padded[at + 2] - p)));
+                var yy = scaleY * (16 * (padded[at - stride] - p + (padded[at + stride] - p))
+                    - (padded[at - 2 * stride] - p + (padded[at + 2 * stride] - p)));
+                var slope = row * nx + i;
+                var xy = mixed * (8 * (slopes[slope + 3 * nx] - slopes[slope + nx]) - (slopes[slope + 4 * nx] - slopes[slope]));
                 var change = xx + yy + xx * yy - xy * xy;
                 double logDeterminant;
                 double inverseXX, inverseXY, inverseYY;
@@ -269,11 +354,12 @@ internal sealed class PlaneNewton
                 }
 
                 Pulled[cell] = pulled;
-                weighted += b * r;
-                weight += b;
-                stiffXX[cell] = b * inverseXX;
-                stiffXY[cell] = b * inverseXY;
-                stiffYY[cell] = b * inverseYY;
+                var faded = b * (b / (b + fade));
+                weighted += faded * r;
+                weight += faded;
+                stiffXX[cell] = faded * inverseXX;
+                stiffXY[cell] = faded * inverseXY;
+                stiffYY[cell] = faded * inverseYY;
             }
         }
 
@@ -341,14 +427,6 @@ internal sealed class PlaneNewton
         if (phase < 0)
             phase += 2 * count;
         return phase < count ? phase : 2 * count - 1 - phase;
-    }
-
-    private static int[] GhostIndices(int count, bool periodic)
-    {
-        var indices = new int[count + 5];
-        for (var i = 0; i < indices.Length; i++)
-            indices[i] = Fold(i - 2, count, periodic);
-        return indices;
     }
 
     // log(1 + x) and e^x − 1 without loss for small x (W. Kahan's forms).
