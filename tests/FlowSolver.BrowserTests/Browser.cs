@@ -30,6 +30,11 @@ public sealed class Browser : IAsyncLifetime
             RunWriter.WriteAll(result, SampleRuns.Labels, SampleRuns.Provenance, Folder(name), maps, formats: Reporting.Figures.FigureFormats.Svg);
         }
 
+        var finer = Folder("line-finer");
+        Directory.CreateDirectory(finer);
+        RunWriter.WriteAll(SampleRuns.Line(step: 0.025), SampleRuns.Labels, SampleRuns.Provenance, finer, formats: Reporting.Figures.FigureFormats.Svg);
+        Directory.CreateDirectory(Folder("gathered"));
+        Reporting.Page.PageWriter.Write(Reporting.Page.GatherPage.Model([Folder("line"), finer]), Folder("gathered"));
         if (Missing is not null)
             return;
         playwright = await Playwright.CreateAsync();

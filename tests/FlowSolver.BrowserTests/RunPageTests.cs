@@ -163,6 +163,24 @@ public sealed class RunPageTests(Browser browser) : IClassFixture<Browser>
     }
 
     [SkippableFact]
+    public async Task GatheredPage_SwitchesARunInAllItsChartsAndComplainsOfNothing()
+    {
+        await using var open = await browser.Open("gathered");
+        var page = open.Page;
+        var charts = page.Locator("[data-chart] canvas");
+        var before = new List<string>();
+        for (var i = 0; i < await charts.CountAsync(); i++)
+            before.Add(await charts.Nth(i).EvaluateAsync<string>("canvas => canvas.toDataURL()"));
+        Assert.True(before.Count >= 5);
+        await page.Locator("input[data-method=line]").First.PressAsync("Space");
+        for (var i = 0; i < before.Count; i++)
+            Assert.NotEqual(before[i], await charts.Nth(i).EvaluateAsync<string>("canvas => canvas.toDataURL()"));
+        Assert.Empty(open.Complaints);
+        await page.Locator("input[data-method=line]").First.PressAsync("Space");
+        await open.Picture("gathered", "main");
+    }
+
+    [SkippableFact]
     public async Task Map_UnderThePointerAndTheKeys_GivesValuesOfEveryMethod()
     {
         await using var open = await browser.Open("plane");

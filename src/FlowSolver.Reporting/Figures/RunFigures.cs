@@ -323,7 +323,7 @@ public static class RunFigures
 
     // The lower end of a logarithmic scale: below the middle value of every curve. A curve that starts at rounding (all methods share the start)
     // would otherwise stretch the scale over decades that say nothing.
-    private static double? Floor(IEnumerable<Curve> curves)
+    internal static double? Floor(IEnumerable<Curve> curves)
     {
         var floor = double.PositiveInfinity;
         foreach (var curve in curves)

@@ -20,7 +20,11 @@ public enum VerdictTone
 /// <param name="Tone">At a glance.</param>
 /// <param name="Headline">One sentence.</param>
 /// <param name="Reasons">One sentence or two for each method or item, most important first.</param>
-public sealed record Verdict(VerdictTone Tone, string Headline, IReadOnlyList<string> Reasons);
+public sealed record Verdict(VerdictTone Tone, string Headline, IReadOnlyList<string> Reasons)
+{
+    /// <summary>A word or two before the headline, such as <c>a comparison</c>; null goes by the tone.</summary>
+    public string? Word { get; init; }
+}
 
 /// <summary>A number that a reader wants first.</summary>
 /// <param name="Label">What it is.</param>

@@ -91,7 +91,7 @@ public static class PageWriter
         };
         body.Append("<header class=\"top\"><p class=\"kind\">FlowSolver · ").Append(Text(page.Kind)).Append("</p><h1>").Append(Text(page.Title)).Append("</h1>");
         body.Append("<p class=\"asked\"><span class=\"tag\">Asked</span> ").Append(Text(page.Question)).Append("</p></header>\n");
-        body.Append("<section class=\"verdict ").Append(tone).Append("\" aria-labelledby=\"verdict\"><p class=\"tag\"><span class=\"sign\" aria-hidden=\"true\">").Append(sign).Append("</span> Found: ").Append(word).Append("</p>");
+        body.Append("<section class=\"verdict ").Append(tone).Append("\" aria-labelledby=\"verdict\"><p class=\"tag\"><span class=\"sign\" aria-hidden=\"true\">").Append(sign).Append("</span> Found: ").Append(Text(page.Verdict.Word ?? word)).Append("</p>");
         body.Append("<h2 id=\"verdict\">").Append(Text(page.Verdict.Headline)).Append("</h2>");
         if (page.Verdict.Reasons.Count > 0)
         {

@@ -66,7 +66,7 @@ public static class RunFindings
         {
             return new Verdict(VerdictTone.Failed, failed.Count == 0
                 ? "Part of the run could not be trusted."
-                : Listed(failed) + (failed.Count == 1 ? " could not be trusted to the end." : " could not be trusted to the end.") + " The rest stands.", reasons);
+                : Listed(failed) + " could not be trusted to the end. The rest stands.", reasons);
         }
 
         var off = findings.Where(finding => finding.IsOff).ToList();
