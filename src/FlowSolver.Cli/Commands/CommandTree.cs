@@ -17,6 +17,7 @@ internal static class CommandTree
             CheckCommand.Create(host),
             ConvergeCommand.Create(host),
             NewCommand.Create(host),
+            ReferenceCommand.Create(host),
         };
         return root;
     }
