@@ -1,5 +1,6 @@
 using FlowSolver.Schemes.ExactFlow;
 using FlowSolver.Schemes.Jko;
+using FlowSolver.Schemes.Splitting;
 
 namespace FlowSolver.Schemes;
 
@@ -10,6 +11,11 @@ public static class SchemeCatalogue
     [
         new ExactFlowScheme(),
         new JkoScheme(),
+        SplittingScheme.Proximal,
+        SplittingScheme.Gradient,
+        SplittingScheme.StrangNoiseFlowNoise,
+        SplittingScheme.StrangFlowNoiseFlow,
+        SplittingScheme.Trapezoid,
     ];
 
     /// <summary>All schemes, in the order in which tables and figures show them.</summary>

@@ -1,0 +1,237 @@
+using FlowSolver.Grids;
+
+namespace FlowSolver.Schemes.Splitting;
+
+/// <summary>
+/// Carries a density on a line through a map without noise, by mass: each piece of a cell goes to the cells that its image covers. Works for any map: where
+/// it folds, masses add up; where it sends an interval to a point, the mass of the interval lands in that cell.
+/// </summary>
+internal sealed class PushForwardOnLine
+{
+    private static readonly double[] GaussPoints = [-0.7745966692414834, 0, 0.7745966692414834];
+    private static readonly double[] GaussWeights = [5.0 / 18, 8.0 / 18, 5.0 / 18];
+
+    private readonly int cells;
+    private readonly bool periodic;
+    private readonly List<(double From, double To, int Cell)> pieces = [];
+
+    // Cells in which the image has an edge, a fold or an atom: they keep their averages.
+    private readonly bool[] rough;
+    private readonly double[] averages;
+    private readonly double[] flows;
+
+    public PushForwardOnLine(ChainOnLine chain, Axis axis)
+    {
+        cells = axis.Cells;
+        periodic = axis.IsPeriodic;
+        rough = new bool[cells];
+        averages = new double[cells];
+        flows = new double[cells];
+        var margin = 1e-13 * axis.Interval.Length;
+        var ends = new List<double>();
+        for (var cell = 0; cell <= cells; cell++)
+            ends.Add(axis.Edge(cell));
+        foreach (var point in chain.Breakpoints)
+        {
+            ends.Add(point - margin);
+            ends.Add(point + margin);
+        }
+
+        var x = ends.Where(p => p >= axis.Interval.From && p <= axis.Interval.To).Order().ToArray();
+        var image = new double[x.Length];
+        chain.Map(x, image);
+        double Place(double position) => (position - axis.Interval.From) / axis.Width;
+        foreach (var point in chain.Breakpoints.Concat(chain.MovedEnds))
+            MarkRough(Place(chain.At(point)));
+        var rising = 0;
+        for (var i = 0; i + 1 < x.Length; i++)
+        {
+            if (x[i + 1] - x[i] <= 4 * margin && x[i + 1] - x[i] < 0.5 * axis.Width)
+            {
+                // The two sides of a breakpoint.
+                MarkRough(Place(image[i]));
+                MarkRough(Place(image[i + 1]));
+                rising = 0;
+                continue;
+            }
+
+            var (low, high) = (Place(image[i]), Place(image[i + 1]));
+            var direction = Math.Sign(high - low);
+            if (rising * direction < 0)
+                MarkRough(low);
+            rising = direction == 0 ? rising : direction;
+            AddPieces(x[i], x[i + 1], low, high, position => Place(chain.At(position)));
+        }
+    }
+
+    /// <summary>Writes the image of a density.</summary>
+    /// <param name="source">Densities, <paramref name="stride"/> apart.</param>
+    /// <param name="destination">Receives densities, <paramref name="stride"/> apart; may be <paramref name="source"/>.</param>
+    /// <param name="stride">Distance between neighbours.</param>
+    /// <param name="axis">The axis, for its width.</param>
+    public void Apply(ReadOnlySpan<double> source, Span<double> destination, int stride, Axis axis)
+    {
+        averages.AsSpan().Clear();
+        foreach (var (from, to, cell) in pieces)
+        {
+            var mass = 0.0;
+            for (var g = 0; g < GaussPoints.Length; g++)
+            {
+                var position = 0.5 * (from + to) + 0.5 * (to - from) * GaussPoints[g];
+                var place = (position - axis.Interval.From) / axis.Width - 0.5;
+                mass += GaussWeights[g] * DensityInterpolation.Evaluate(source, cells, stride, periodic, place);
+            }
+
+            averages[cell] += mass * (to - from) / axis.Width;
+        }
+
+        // A smooth density is held by its values at the centres, average − δ²/24 + 3δ⁴/640: written as differences of flows between neighbours, so that the
+        // sum stays, with no flow near cells that keep their averages.
+        for (var face = 0; face < cells; face++)
+            flows[face] = Flow(face);
+        for (var cell = 0; cell < cells; cell++)
+            destination[cell * stride] = averages[cell] - (flows[cell] - (cell > 0 ? flows[cell - 1] : periodic ? flows[cells - 1] : 0));
+    }
+
+    // Flow from a cell to the next; across a wall it is 0 by symmetry.
+    private double Flow(int cell)
+    {
+        if (!periodic && cell == cells - 1)
+            return 0;
+        for (var offset = -1; offset <= 2; offset++)
+        {
+            if (rough[DensityInterpolation.Wrap(cell + offset, cells, periodic)])
+                return 0;
+        }
+
+        var (left, right) = (At(0), At(1));
+        var flow = (right - left) / 24 - 3 * (At(2) - 3 * right + 3 * left - At(-1)) / 640;
+        // Below a quarter of either cell on each side no value can turn negative; a smooth density is far below.
+        return Math.Abs(flow) < 0.25 * Math.Min(left, right) ? flow : 0;
+
+        double At(int offset) => averages[DensityInterpolation.Wrap(cell + offset, cells, periodic)];
+    }
+
+    private void MarkRough(double place)
+    {
+        if (double.IsFinite(place))
+            rough[DensityInterpolation.Wrap((int)Math.Floor(place), cells, periodic)] = true;
+    }
+
+    private void AddPieces(double from, double to, double imageFrom, double imageTo, Func<double, double> map)
+    {
+        var first = (long)Math.Floor(Math.Min(imageFrom, imageTo));
+        var last = (long)Math.Floor(Math.Max(imageFrom, imageTo));
+        // An image that ends on an edge between cells touches the next one only in a point.
+        if (last > first && Math.Max(imageFrom, imageTo) == last)
+            last--;
+        var up = imageTo >= imageFrom;
+        var start = from;
+        for (var k = 0L; k <= last - first; k++)
+        {
+            var cell = up ? first + k : last - k;
+            var end = k == last - first ? to : Solve(start, to, up ? cell + 1 : cell);
+            if (end > start)
+                pieces.Add((start, end, DensityInterpolation.Wrap((int)cell, cells, periodic)));
+            start = end;
+        }
+
+        double Solve(double low, double high, double edge)
+        {
+            // Secant steps kept inside the bracket.
+            var (valueLow, valueHigh) = (map(low) - edge, map(high) - edge);
+            for (var k = 0; k < 80; k++)
+            {
+                var middle = k % 3 == 2 ? 0.5 * (low + high) : low - valueLow * (high - low) / (valueHigh - valueLow);
+                if (!(middle > low && middle < high))
+                    break;
+                var value = map(middle) - edge;
+                if (value == 0)
+                    return middle;
+                if (value > 0 == valueHigh > 0)
+                    (high, valueHigh) = (middle, value);
+                else
+                    (low, valueLow) = (middle, value);
+            }
+
+            return Math.Abs(valueLow) < Math.Abs(valueHigh) ? low : high;
+        }
+    }
+}
+
+/// <summary>
+/// Carries a density on the plane through a smooth one-to-one map without noise, by its value: ρ′(y) = ρ(P⁻¹y)·det D(P⁻¹)(y), the logarithm of ρ being interpolated.
+/// </summary>
+internal sealed class PullBackOnPlane
+{
+    private const int Points = DensityInterpolation.Points;
+    private readonly Axis axisX;
+    private readonly Axis axisY;
+    private readonly double[] placeX;
+    private readonly double[] placeY;
+    private readonly double[] volume;
+
+    public PullBackOnPlane(ChainOnPlane chain, Axis axisX, Axis axisY)
+    {
+        (this.axisX, this.axisY) = (axisX, axisY);
+        var count = checked(axisX.Cells * axisY.Cells);
+        (placeX, placeY, volume) = (new double[count], new double[count], new double[count]);
+        Span<double> x = stackalloc double[TransportOnPlane.Chunk];
+        Span<double> y = stackalloc double[TransportOnPlane.Chunk];
+        for (var first = 0; first < count; first += TransportOnPlane.Chunk)
+        {
+            var part = Math.Min(TransportOnPlane.Chunk, count - first);
+            for (var i = 0; i < part; i++)
+                (x[i], y[i]) = (axisX.Center((first + i) % axisX.Cells), axisY.Center((first + i) / axisX.Cells));
+            chain.MapBack(x[..part], y[..part], placeX.AsSpan(first, part), placeY.AsSpan(first, part), volume.AsSpan(first, part));
+            for (var i = first; i < first + part; i++)
+            {
+                placeX[i] = (placeX[i] - axisX.Interval.From) / axisX.Width - 0.5;
+                placeY[i] = (placeY[i] - axisY.Interval.From) / axisY.Width - 0.5;
+            }
+        }
+    }
+
+    /// <summary>Writes the image of a density.</summary>
+    /// <param name="source">Densities, x fastest.</param>
+    /// <param name="logs">Work array of the same length.</param>
+    /// <param name="destination">Receives densities; another array.</param>
+    public void Apply(double[] source, double[] logs, double[] destination)
+    {
+        for (var i = 0; i < source.Length; i++)
+            logs[i] = source[i] > 1e-290 ? Math.Log(source[i]) : double.NaN;
+        for (var i = 0; i < destination.Length; i++)
+            destination[i] = volume[i] > 0 ? volume[i] * At(source, logs, placeX[i], placeY[i]) : 0;
+    }
+
+    private double At(double[] source, double[] logs, double px, double py)
+    {
+        Span<double> weightsX = stackalloc double[Points];
+        Span<double> weightsY = stackalloc double[Points];
+        Span<int> columns = stackalloc int[Points];
+        var (firstX, firstY) = (DensityInterpolation.Locate(px, out var withinX), DensityInterpolation.Locate(py, out var withinY));
+        DensityInterpolation.Weights(withinX, weightsX);
+        DensityInterpolation.Weights(withinY, weightsY);
+        for (var k = 0; k < Points; k++)
+            columns[k] = DensityInterpolation.Wrap(firstX + k, axisX.Cells, axisX.IsPeriodic);
+        var log = 0.0;
+        for (var r = 0; r < Points; r++)
+        {
+            var row = DensityInterpolation.Wrap(firstY + r, axisY.Cells, axisY.IsPeriodic) * axisX.Cells;
+            var sum = 0.0;
+            for (var k = 0; k < Points; k++)
+                sum += weightsX[k] * logs[row + columns[k]];
+            log += weightsY[r] * sum;
+        }
+
+        // A straight mean of the four nearest where the logarithm has gaps (NaN) or is too rough.
+        var lower = DensityInterpolation.Wrap(firstY + 3, axisY.Cells, axisY.IsPeriodic) * axisX.Cells;
+        var upper = DensityInterpolation.Wrap(firstY + 4, axisY.Cells, axisY.IsPeriodic) * axisX.Cells;
+        var (tx, ty) = (withinX - 3, withinY - 3);
+        var plain = Bilinear(logs, lower, upper, columns[3], columns[4], tx, ty);
+        return Math.Abs(log - plain) < 1 ? Math.Exp(log) : Bilinear(source, lower, upper, columns[3], columns[4], tx, ty);
+    }
+
+    private static double Bilinear(double[] field, int lower, int upper, int left, int right, double tx, double ty)
+        => (1 - ty) * ((1 - tx) * field[lower + left] + tx * field[lower + right]) + ty * ((1 - tx) * field[upper + left] + tx * field[upper + right]);
+}
