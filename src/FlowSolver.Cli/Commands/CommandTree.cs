@@ -16,6 +16,7 @@ internal static class CommandTree
             RunCommand.Create(host),
             CheckCommand.Create(host),
             ConvergeCommand.Create(host),
+            GatherCommand.Create(host),
             NewCommand.Create(host),
             ReferenceCommand.Create(host),
         };

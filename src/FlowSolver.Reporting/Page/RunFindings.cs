@@ -141,7 +141,7 @@ public static class RunFindings
         }
 
         var quiet = budget.Count(IsWithinNoise);
-        var isOff = budget.Count - quiet > OffShare * budget.Count;
+        var isOff = worst is not null && budget.Count - quiet > OffShare * budget.Count;
         var byStep = peak.StepBias is { } bias && bias >= (peak.NoiseMean ?? 0);
         var cause = !isOff ? "within noise" : byStep ? "by the bias of its step" : peak.Verdict;
         var parts = new List<string>();
@@ -159,7 +159,7 @@ public static class RunFindings
             + $". {(quiet == budget.Count ? "Within noise at all" : $"Within noise at {quiet} of")} {budget.Count} report times after the start.");
     }
 
-    private static bool IsWithinNoise(BudgetRow row) => row.Verdict.StartsWith("within noise", StringComparison.Ordinal);
+    private static bool IsWithinNoise(BudgetRow row) => row.Verdict is "within noise" or "within grid error" or "just above noise";
 
     private static double? GridAt(ComparisonResult result, double time)
     {

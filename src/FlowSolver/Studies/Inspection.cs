@@ -37,7 +37,7 @@ public sealed record Inspection
     /// <summary>Start mass in the cells that touch a wall.</summary>
     public required double StartWallMass { get; init; }
 
-    /// <summary>Largest |V(x_i) − V(x_j)|/T between neighbours where probability is: the grid resolves the landscape well below 1.</summary>
+    /// <summary>Largest |V(x_i) − V(x_j)|/T between neighbours where density is above a thousandth of its largest: the grid resolves the landscape well below 1.</summary>
     public required double CellContrast { get; init; }
 
     /// <summary>Cell-steps of one stepping method: cells × steps.</summary>
@@ -56,7 +56,7 @@ public sealed record Inspection
         ArgumentNullException.ThrowIfNull(plan);
         var onGrid = new GridProblem(problem, grid);
         var start = StartOnGrid.Create(problem.Start, grid);
-        var live = LiveCells(start, onGrid.Equilibrium);
+        var live = LiveCells(start, onGrid.Equilibrium, 1e-9);
         var (least, largest, leastLive, largestLive) = Curvatures(problem, grid, live);
         var rate = problem.Mobility * plan.Step;
         var inspection = new Inspection
@@ -71,7 +71,7 @@ public sealed record Inspection
             UniqueStep = leastLive < 0 ? -1 / (problem.Mobility * leastLive) : null,
             EquilibriumWallMass = WallMass(onGrid.Equilibrium),
             StartWallMass = WallMass(start),
-            CellContrast = Contrast(onGrid, live),
+            CellContrast = Contrast(onGrid, LiveCells(start, onGrid.Equilibrium, 1e-3)),
             CellSteps = (double)grid.CellCount * plan.TotalSteps,
             WalkerSteps = (double)walkers * plan.TotalSteps,
             Warnings = [],
@@ -110,14 +110,13 @@ public sealed record Inspection
         return list;
     }
 
-    // The fewest cells that hold all but 1e-9 of each density: those above the threshold found by bisection on log density would need a sort;
-    // a fixed share of the largest value finds the same region and needs none.
-    private static bool[] LiveCells(Density start, Density equilibrium)
+    // Cells above a share of the largest value: they hold all but about that share of the mass, and finding them needs no sort.
+    private static bool[] LiveCells(Density start, Density equilibrium, double share)
     {
         var live = new bool[start.Values.Length];
         foreach (var density in new[] { start, equilibrium })
         {
-            var border = 1e-9 * SpanKernels.MaxAbs(density.Values);
+            var border = share * SpanKernels.MaxAbs(density.Values);
             for (var i = 0; i < live.Length; i++)
                 live[i] |= density.Values[i] > border;
         }

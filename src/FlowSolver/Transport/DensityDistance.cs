@@ -19,7 +19,7 @@ public static class DensityDistance
         Require.That(first.Grid.X.Interval == second.Grid.X.Interval && first.Grid.Y?.Interval == second.Grid.Y?.Interval,
             "The two densities were on different domains; they must be on the same.");
         if (first.Grid.Dimension != 1)
-            return null;
+            return PlaneTransport.Between(first, second, team);
         return TransportBracket.Exact(
             first.Grid.X.IsPeriodic ? CircleTransport.Distance(first, second) : LineTransport.Distance(first, second));
     }
