@@ -103,7 +103,7 @@ public sealed record Inspection
             list.Add(FormattableString.Invariant($"At equilibrium {100 * found.EquilibriumWallMass:g2} % of the mass lies in the cells at the walls: the walls shape the result. Widen the domain if they are not meant to."));
         if (found.StartWallMass > 1e-4)
             list.Add(FormattableString.Invariant($"{100 * found.StartWallMass:g2} % of the start lies in the cells at the walls."));
-        if (found.CellContrast > 1)
+        if (found.CellContrast > 2)
             list.Add(FormattableString.Invariant($"The potential changes by up to {found.CellContrast:g2} T from one cell to the next where probability is: more cells are needed for a small grid error."));
         if (!plan.IsUniform)
             list.Add(FormattableString.Invariant($"Some report intervals are no multiple of the step {plan.Step}; their steps will be shortened to fit."));
