@@ -223,6 +223,7 @@ public static class CaseFileReader
                     return potential;
                 var (pointsX, pointsY) = Lattice(grid);
                 FormulaCheck.RequireFinite(formula, "The potential", domain, pointsX, pointsY);
+                FormulaCheck.RequireSlope(potential, domain, pointsX, pointsY);
                 WarnAtSeams(formula, domain);
                 return potential;
             }

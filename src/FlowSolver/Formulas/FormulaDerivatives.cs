@@ -26,6 +26,13 @@ internal sealed class FormulaDerivatives(FormulaGraph graph)
             return node.Kind == (byY ? NodeKind.Y : NodeKind.X) ? graph.One : graph.Zero;
         var a = node.A;
         var da = known[(a.Id, byY)];
+        // cosh^-n, the tail of tanh: n·cosh^-(n+1)·sinh would be 0·∞ where cosh overflows; n·cosh^-n·tanh is the same and stays finite.
+        if (node.Kind == NodeKind.IntegerPower && node.Exponent < 0 && a.Kind == NodeKind.Cosh)
+        {
+            var inner = graph.Multiply(graph.Apply(NodeKind.Tanh, a.A!), known[(a.A!.Id, byY)]);
+            return graph.Multiply(graph.Multiply(graph.Number(node.Exponent), node), inner);
+        }
+
         if (node.B is null)
             return da == graph.Zero ? da : graph.Multiply(Outer(node, a), da);
         var b = node.B;

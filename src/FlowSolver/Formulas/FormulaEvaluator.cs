@@ -77,7 +77,7 @@ internal sealed class FormulaEvaluator
             var side = arguments[i];
             values[i] = node.Kind switch
             {
-                NodeKind.Abs => side < 0 ? -a : a,
+                NodeKind.Abs => side < 0 ? 0 - a : a, // Not −a: the sign of a zero would turn an infinite slope round.
                 NodeKind.Sign => Function(NodeKind.Sign, side),
                 NodeKind.Step => Function(NodeKind.Step, side),
                 NodeKind.Minimum => side < 0 ? a : b,

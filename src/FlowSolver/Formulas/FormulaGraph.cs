@@ -67,7 +67,7 @@ internal sealed class FormulaGraph
         var (factorA, termA) = Split(a);
         var (factorB, termB) = Split(b);
         if (termA == termB)
-            return Scale(factorA + factorB, termA);
+            return Scale(Sum(factorA, factorB), termA);
         return a.Id <= b.Id ? Make(NodeKind.Add, a, b) : Make(NodeKind.Add, b, a);
     }
 
@@ -83,7 +83,7 @@ internal sealed class FormulaGraph
             return Add(a, b.A!);
         var (factorA, termA) = Split(a);
         var (factorB, termB) = Split(b);
-        return termA == termB ? Scale(factorA - factorB, termA) : Make(NodeKind.Subtract, a, b);
+        return termA == termB ? Scale(Sum(factorA, -factorB), termA) : Make(NodeKind.Subtract, a, b);
     }
 
     public FormulaNode Multiply(FormulaNode a, FormulaNode b)
@@ -253,6 +253,13 @@ internal sealed class FormulaGraph
         if (b.Kind == NodeKind.Divide && b.A!.IsNumber && double.IsNormal(factor * b.A.Value))
             return Divide(Number(factor * b.A.Value), b.B!);
         return Make(NodeKind.Multiply, number, b);
+    }
+
+    /// <summary>The sum of two factors of one term; 0 when only the rounding of the decimals they were written in is left, as in 0.1 + 0.2 − 0.3.</summary>
+    private static double Sum(double a, double b)
+    {
+        var sum = a + b;
+        return Math.Abs(sum) <= 4.5e-16 * Math.Max(Math.Abs(a), Math.Abs(b)) ? 0 : sum;
     }
 
     private FormulaNode Scale(double factor, FormulaNode term) => Multiply(Number(factor), term);

@@ -140,10 +140,46 @@ public static class FormulaCheck
                 if (double.IsFinite(value[i]) && (mayBeNegative || value[i] >= 0))
                     continue;
                 var place = domain.Y is null ? FormattableString.Invariant($"x = {x[i]}") : FormattableString.Invariant($"x = {x[i]}, y = {row}");
-                var found = double.IsNaN(value[i]) ? "not a number" : double.IsInfinity(value[i]) ? "infinite" : FormattableString.Invariant($"{value[i]}");
+                var found = double.IsNaN(value[i]) ? "not a number" : double.IsInfinity(value[i]) ? value[i] > 0 ? "infinite" : "minus infinity" : FormattableString.Invariant($"{value[i]}");
                 throw new InputException(new InputFault(
                     $"{what} was {found} at {place}; it must be finite{(mayBeNegative ? "" : " and not negative")} on the whole domain.",
                     "Shrink the domain or change the formula.", Detail: formula.Text.ReplaceLineEndings(" ")));
+            }
+        }
+    }
+
+    /// <summary>
+    /// Refuses a landscape whose slope is not a number at a point where V itself is finite: there something inside the formula overflows, such as
+    /// exp(1000*x) in 1/(1 + exp(1000*x)). An infinite slope, such as that of sqrt(x) at 0, passes.
+    /// </summary>
+    /// <param name="potential">The landscape, of the domain's dimension.</param>
+    /// <param name="domain">The domain.</param>
+    /// <param name="pointsX">Points along x, at least 2.</param>
+    /// <param name="pointsY">Points along y, at least 2; ignored in one dimension.</param>
+    /// <exception cref="InputException">There is such a point; the sentence names the first one.</exception>
+    public static void RequireSlope(FormulaPotential potential, Domain domain, int pointsX, int pointsY = 2)
+    {
+        ArgumentNullException.ThrowIfNull(potential);
+        ArgumentNullException.ThrowIfNull(domain);
+        Require.That(potential.Dimension == domain.Dimension, "The potential and the domain differ in dimension; they must agree.");
+        var x = Lattice(domain.X, Require.AtLeast(pointsX, 2));
+        var ys = domain.Y is null ? [0.0] : Lattice(domain.Y, Require.AtLeast(pointsY, 2));
+        var y = new double[domain.Y is null ? 0 : pointsX];
+        var gradientX = new double[pointsX];
+        var gradientY = new double[y.Length];
+        foreach (var row in ys)
+        {
+            Array.Fill(y, row);
+            potential.Gradient(x, y, gradientX, gradientY);
+            for (var i = 0; i < x.Length; i++)
+            {
+                if (!double.IsNaN(gradientX[i]) && (domain.Y is null || !double.IsNaN(gradientY[i])))
+                    continue;
+                var place = domain.Y is null ? FormattableString.Invariant($"x = {x[i]}") : FormattableString.Invariant($"x = {x[i]}, y = {row}");
+                throw new InputException(new InputFault(
+                    $"The slope of the potential was not a number at {place}, where the potential is {FormattableString.Invariant($"{potential.ValueAt(x[i], row)}")}; it must be known on the whole domain.",
+                    "Part of the formula overflows there: write it in a form that does not, such as tanh for a quotient of exponentials.",
+                    Detail: potential.Description.ReplaceLineEndings(" ")));
             }
         }
     }
