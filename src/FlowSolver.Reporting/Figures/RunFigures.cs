@@ -321,19 +321,21 @@ public static class RunFigures
         new LegendNote("V at " + string.Join(", ", style.LevelsInTemperature.Select(level => Shown(level))) + " T above its least value", LegendSign.Level),
     ];
 
-    // The lower end of a logarithmic scale: below the middle value of every curve. A curve that starts at rounding (all methods share the start)
-    // would otherwise stretch the scale over decades that say nothing.
+    // The lower end of a logarithmic scale: below everything after the start, but no more than five decades. All methods share the start, where
+    // their distances are rounding; that would stretch the scale over decades that say nothing.
     internal static double? Floor(IEnumerable<Curve> curves)
     {
-        var floor = double.PositiveInfinity;
+        var (low, high) = (double.PositiveInfinity, 0.0);
         foreach (var curve in curves)
         {
-            var positive = curve.Y.Where(value => double.IsFinite(value) && value > 0).Order().ToList();
-            if (positive.Count > 0)
-                floor = Math.Min(floor, positive[positive.Count / 2]);
+            for (var i = 1; i < curve.Y.Count; i++)
+            {
+                if (double.IsFinite(curve.Y[i]) && curve.Y[i] > 0)
+                    (low, high) = (Math.Min(low, curve.Y[i]), Math.Max(high, curve.Y[i]));
+            }
         }
 
-        return double.IsFinite(floor) ? floor / 4 : null;
+        return double.IsFinite(low) ? Math.Max(low, high / 1e5) / 1.6 : null;
     }
 
     private static void AddGridError(ComparisonResult result, FigureStyle style, List<Curve> curves)

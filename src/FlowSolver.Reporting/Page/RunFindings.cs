@@ -69,20 +69,22 @@ public static class RunFindings
                 : Listed(failed) + " could not be trusted to the end. The rest stands.", reasons);
         }
 
-        var off = findings.Where(finding => finding.IsOff).ToList();
+        var off = findings.Where(finding => finding is { IsOff: true, Worst.DistanceToExact: not null }).ToList();
+        var unmeasured = findings.Where(finding => finding.Worst is null || finding.Cause == "not measured").Select(finding => finding.Method).ToList();
+        var gap = unmeasured.Count == 0 ? "" : " Not measured: " + Listed(unmeasured) + ".";
         if (findings.Count == 0)
             return new Verdict(VerdictTone.Sound, "The exact flow was computed; there was nothing to compare it with.", reasons);
         if (off.Count == 0)
-            return new Verdict(VerdictTone.Sound, "No method differs from the exact flow by more than grid error and noise explain.", reasons);
+            return new Verdict(VerdictTone.Sound, unmeasured.Count == findings.Count ? "No distance from the exact flow was measured." : "No method differs from the exact flow by more than grid error and noise explain." + gap, reasons);
         var first = off[0];
         var headline = string.Create(CultureInfo.InvariantCulture,
             $"{first.Method} is furthest off: {Length(first.Worst!.DistanceToExact!.Value.Distance, labels)} from the exact flow at {AtTime(first.Worst.Time, labels)}{Share(result, first.Worst)}, {first.Cause}.");
-        var fine = findings.Where(finding => !finding.IsOff).Select(finding => finding.Method).ToList();
+        var fine = findings.Where(finding => !finding.IsOff && !unmeasured.Contains(finding.Method)).Select(finding => finding.Method).ToList();
         if (fine.Count > 0)
             headline += " " + Listed(fine) + (fine.Count == 1 ? " agrees" : " agree") + " with it to within grid error and noise.";
-        else if (off.Count > 1)
+        else if (off.Count > 1 && off.Count == findings.Count)
             headline += " All " + off.Count.ToString(CultureInfo.InvariantCulture) + " methods are off by more than grid error and noise.";
-        return new Verdict(VerdictTone.Attention, headline, reasons);
+        return new Verdict(VerdictTone.Attention, headline + gap, reasons);
     }
 
     /// <summary>The findings as a table.</summary>
@@ -99,7 +101,7 @@ public static class RunFindings
             finding.Kind == SeriesKind.Flow ? finding.Worst?.DistanceToExact?.Distance : finding.Budget?.StepBias,
             finding.Budget?.Noise95,
             finding.Grid,
-            finding.IsFailed ? "failed" : finding.IsOff ? "off, " + finding.Cause : finding.Cause,
+            finding.IsFailed ? "failed" : finding.IsOff ? "off, " + (finding.Cause.StartsWith("and ", StringComparison.Ordinal) ? finding.Cause[4..] : finding.Cause) : finding.Cause,
         ]).ToList();
         return new Table(
             "findings",
@@ -130,36 +132,48 @@ public static class RunFindings
     private static MethodFinding OfSampler(ComparisonResult result, CaseLabels labels, List<SeriesRow> rows, SeriesRow? worst)
     {
         var method = rows[0].Method;
-        var budget = result.Budget.Where(row => row.Sampler == method && row.Time > 0).ToList();
-        var peak = worst is not null ? budget.FirstOrDefault(row => row.Time == worst.Time) : budget.MaxBy(row => row.Total ?? 0);
+        var budget = result.Budget.Where(row => row.Sampler == method && row.Time > 0 && row.Total is not null && row.NoiseMean is not null).ToList();
+        var peak = worst is null ? null : budget.FirstOrDefault(row => row.Time == worst.Time) ?? budget.MaxBy(row => row.Total);
         if (peak is null)
         {
-            var sentence = worst?.DistanceToExact is { } known
-                ? $"{method}: at most {Length(known.Distance, labels)} from the exact flow, at {AtTime(worst.Time, labels)}. No error budget was computed."
-                : $"{method}: no distance to the exact flow was computed.";
-            return new MethodFinding(method, SeriesKind.Ensemble, worst, rows[^1], null, null, false, false, "no error budget", sentence);
+            var known = worst?.DistanceToExact is { } distance
+                ? $"{method}: at most {Length(distance.Distance, labels)} from the exact flow, at {AtTime(worst.Time, labels)}; what of it is noise was not measured."
+                : $"{method}: its distance from the exact flow was not measured.";
+            return new MethodFinding(method, SeriesKind.Ensemble, worst, rows[^1], null, null, false, false, "not measured", known);
         }
 
-        var quiet = budget.Count(IsWithinNoise);
-        var isOff = worst is not null && budget.Count - quiet > OffShare * budget.Count;
-        var byStep = peak.StepBias is { } bias && bias >= (peak.NoiseMean ?? 0);
-        var cause = !isOff ? "within noise" : byStep ? "by the bias of its step" : peak.Verdict;
+        var loud = budget.Where(row => !IsQuiet(row)).ToList();
+        var isOff = loud.Count > OffShare * budget.Count;
+        var cause = isOff ? CauseOf(loud.GroupBy(row => row.Verdict).MaxBy(group => group.Count())!.Key) : "within noise and grid error";
         var parts = new List<string>();
         if (peak.StepBias is { } step)
             parts.Add($"the bias of its step is {Length(step, labels)}");
         if (peak.Noise95 is { } noise)
-            parts.Add($"noise of {result.WalkerCount.ToString(CultureInfo.InvariantCulture)} walkers reaches {Length(noise, labels)} (95 %)");
+            parts.Add($"noise of {result.WalkerCount.ToString(CultureInfo.InvariantCulture)} walkers reaches {Length(noise, labels)} (95{Space}%)");
         if (peak.GridError is { } grid)
             parts.Add($"the grid adds {Length(grid, labels)}");
-        var total = peak.Total ?? worst?.DistanceToExact?.Distance;
+        var quiet = budget.Count - loud.Count;
         return new MethodFinding(
             method, SeriesKind.Ensemble, worst, rows[^1], peak, peak.GridError, isOff, false, cause,
-            $"{method}: {(total is { } value ? $"at most {Length(value, labels)} from the exact flow, at {AtTime(peak.Time, labels)}" : "no distance to the exact flow")}"
-            + (parts.Count > 0 ? "; there " + Listed(parts) : "")
-            + $". {(quiet == budget.Count ? "Within noise at all" : $"Within noise at {quiet} of")} {budget.Count} report times after the start.");
+            $"{method}: at most {Length(peak.Total!.Value, labels)} from the exact flow, at {AtTime(peak.Time, labels)}{(parts.Count > 0 ? "; there " + Listed(parts) : "")}. "
+            + (loud.Count == 0
+                ? $"Within noise and grid error at all {budget.Count} report times after the start."
+                : $"Off at {loud.Count} of {budget.Count} report times after the start{(isOff ? "" : ", as many as chance brings")}: {Counted(loud)}."));
     }
 
-    private static bool IsWithinNoise(BudgetRow row) => row.Verdict is "within noise" or "within grid error" or "just above noise";
+    // The verdicts of the budget that do not call a method off.
+    private static bool IsQuiet(BudgetRow row)
+        => row.Verdict.StartsWith("within", StringComparison.Ordinal) || row.Verdict is "just above noise" or "not measured";
+
+    private static string CauseOf(string verdict) => verdict switch
+    {
+        "biased by the step" => "by the bias of its step",
+        "wrong law" => "and its walkers do not follow the law of their own scheme",
+        _ => "more than noise and grid explain",
+    };
+
+    private static string Counted(List<BudgetRow> rows)
+        => string.Join(", ", rows.GroupBy(row => row.Verdict).OrderByDescending(group => group.Count()).Select(group => group.Key + (rows.All(row => row.Verdict == group.Key) ? "" : " " + group.Count().ToString(CultureInfo.InvariantCulture) + " times")));
 
     private static double? GridAt(ComparisonResult result, double time)
     {

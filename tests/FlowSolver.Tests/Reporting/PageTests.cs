@@ -2,6 +2,7 @@ using System.Globalization;
 using System.Text.Json.Nodes;
 using System.Text.RegularExpressions;
 using FlowSolver.Reporting;
+using FlowSolver.Reporting.Figures;
 using FlowSolver.Reporting.Page;
 using FlowSolver.Studies;
 
@@ -129,6 +130,67 @@ public sealed class PageTests : IDisposable
         Assert.Equal("jko could not be trusted to the end. The rest stands.", verdict.Headline);
         Assert.StartsWith("jko failed at t = 0.4 s: The gap of a step was 0.01.", verdict.Reasons[0].Replace('\u00a0', ' '), StringComparison.Ordinal);
         Assert.Equal(VerdictTone.Failed, RunFindings.Verdict(SampleRuns.Line() with { Interrupted = true }, SampleRuns.Labels).Tone);
+    }
+
+    // Found by a run in the plane whose ensembles had no distance: the verdict fell over it.
+    [Theory]
+    [InlineData(1)]
+    [InlineData(2)]
+    public void Page_OfARunThatLacksWhateverMayBeMissing_IsStillWritten(int dimension)
+    {
+        var sample = dimension == 1 ? SampleRuns.Line() : SampleRuns.Plane();
+        var bare = sample with
+        {
+            Series = [.. sample.Series.Select(row => new SeriesRow(row.Time, row.Method, row.Kind, row.Moments, null, null, null, null, null, null))],
+            Budget = [.. sample.Budget.Select(row => new BudgetRow(row.Time, row.Sampler, null, null, null, null, null, null, "not measured"))],
+            GridErrors = [.. sample.GridErrors.Select(_ => (double?)null)],
+            Steps = [.. sample.Steps.Select(row => row with { Residual = null, DualGap = null, StepDistance = null })],
+        };
+        RunWriter.WriteAll(bare, CaseLabels.None, SampleRuns.Provenance, directory, formats: FigureFormats.Svg);
+        var verdict = RunFindings.Verdict(bare, CaseLabels.None);
+        Assert.Equal("No distance from the exact flow was measured.", verdict.Headline);
+        // Only the ensembles' distances missing.
+        var part = sample with
+        {
+            Series = [.. sample.Series.Select(row => row.Kind == SeriesKind.Ensemble ? row with { DistanceToExact = null } : row)],
+            Budget = bare.Budget,
+        };
+        Assert.EndsWith("Not measured: ula and proximal-ula.", RunFindings.Verdict(part, CaseLabels.None).Headline, StringComparison.Ordinal);
+        RunWriter.WriteAll(part, CaseLabels.None, SampleRuns.Provenance, directory, formats: FigureFormats.Svg);
+        // Stopped early: fewer densities, series and grid errors than the plan; one method shorter than the rest.
+        var times = sample.Plan.ReportTimes.Take(3).ToHashSet();
+        var stopped = sample with
+        {
+            Series = [.. sample.Series.Where(row => times.Contains(row.Time))],
+            Budget = [.. sample.Budget.Where(row => times.Contains(row.Time))],
+            GridErrors = [.. sample.GridErrors.Take(3)],
+            Densities = [.. sample.Densities.Select((history, i) => history with { Densities = [.. history.Densities.Take(i == 1 ? 1 : 3)] })],
+            Walkers = [.. sample.Walkers.Select(walkers => walkers with { X = [.. walkers.X.Take(3)], Y = [.. walkers.Y.Take(3)] })],
+            Interrupted = true,
+        };
+        RunWriter.WriteAll(stopped, CaseLabels.None, SampleRuns.Provenance, directory, formats: FigureFormats.Svg);
+        // Nothing at all.
+        RunWriter.WriteAll(
+            sample with { Series = [], Budget = [], GridErrors = [], Densities = [], Walkers = [], Steps = [], Work = [], Interrupted = true },
+            CaseLabels.None, SampleRuns.Provenance, directory, formats: FigureFormats.Svg);
+    }
+
+    [Theory]
+    [InlineData("wrong law", "and its walkers do not follow the law of their own scheme")]
+    [InlineData("differs", "more than noise and grid explain")]
+    [InlineData("biased by the step", "by the bias of its step")]
+    public void Verdict_OfAnEnsembleThatIsOff_GivesTheBudgetsCause(string verdict, string cause)
+    {
+        var sample = SampleRuns.Line();
+        var result = sample with { Budget = [.. sample.Budget.Select(row => row with { Verdict = row.Sampler == "ula" ? verdict : "within noise" })] };
+        var finding = RunFindings.Of(result, SampleRuns.Labels).Single(finding => finding.Method == "ula");
+        Assert.True(finding.IsOff);
+        Assert.Equal(cause, finding.Cause);
+        Assert.EndsWith($"Off at 15 of 15 report times after the start: {verdict}.", finding.Sentence, StringComparison.Ordinal);
+        Assert.False(RunFindings.Of(result, SampleRuns.Labels).Single(other => other.Method == "proximal-ula").IsOff);
+        // Two of fifteen are no more than chance brings.
+        var few = sample with { Budget = [.. sample.Budget.Select(row => row with { Verdict = row.Time is > 0.3 and < 0.7 ? verdict : "within grid error" })] };
+        Assert.False(RunFindings.Of(few, SampleRuns.Labels).Single(other => other.Method == "ula").IsOff);
     }
 
     [Fact]
