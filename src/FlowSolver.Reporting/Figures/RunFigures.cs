@@ -133,7 +133,8 @@ public static class RunFigures
 
         if (curves.Count == 0)
             return null;
-        AddGridError(result, style, curves);
+        var floor = Floor(curves);
+        var gridNote = AddGridError(result, labels, style, curves, ref floor);
         var times = result.Budget.Where(row => row.Noise95 is not null).Select(row => row.Time).Distinct().ToArray();
         var bands = new List<Band>();
         if (times.Length > 1)
@@ -145,11 +146,11 @@ public static class RunFigures
         return new Figure(
             "distance", "Distance to the exact flow",
             (bands.Count > 0 ? "An ensemble inside the band cannot be told from one of the exact law. " : "")
-            + "A flow method below the grid error is as good as the yardstick itself. Distances of 0 are not drawn.",
+            + "A flow method below the grid error is as good as the yardstick itself. Distances of 0 are not drawn." + gridNote,
             [
                 new LinePanel("", CaseLabels.WithUnit("time", labels.Time), CaseLabels.WithUnit("W2 to the exact flow", labels.Length))
                 {
-                    Curves = curves, Bands = bands, YIsLogarithmic = true, YFrom = Floor(curves),
+                    Curves = curves, Bands = bands, YIsLogarithmic = true, YFrom = floor,
                 },
             ]);
     }
@@ -160,8 +161,10 @@ public static class RunFigures
         if (samplers.Count == 0)
             return null;
         var panels = new List<Panel>();
+        if (result.Budget.All(row => row.Total is null && row.StepBias is null && row.NoiseMean is null))
+            return null;
         var (_, high) = PanelPainter.Range(
-            result.Budget.SelectMany(row => (double?[])[row.Total, row.StepBias, row.NoiseMean, row.Noise95, row.GridError]).Select(value => value ?? double.NaN), true);
+            result.Budget.SelectMany(row => (double?[])[row.Total, row.StepBias, row.NoiseMean, row.Noise95]).Select(value => value ?? double.NaN), true);
         foreach (var sampler in samplers)
         {
             var rows = result.Budget.Where(row => row.Sampler == sampler).ToList();
@@ -176,7 +179,10 @@ public static class RunFigures
                 : [];
             panels.Add(new LinePanel(sampler, CaseLabels.WithUnit("time", labels.Time), CaseLabels.WithUnit("W2", labels.Length))
             {
-                Curves = curves, Bands = bands, YIsLogarithmic = true, YTo = high,
+                Curves = curves,
+                Bands = bands,
+                YIsLogarithmic = true,
+                YTo = high,
             });
 
             void Add(string label, Func<BudgetRow, double?> value, CurveLook look)
@@ -186,12 +192,26 @@ public static class RunFigures
             }
         }
 
-        var floor = panels.Min(panel => Floor(((LinePanel)panel).Curves) ?? double.NaN);
-        if (double.IsFinite(floor))
+        var gridNote = "";
+        if (Floor(panels.SelectMany(panel => ((LinePanel)panel).Curves).Where(curve => curve.Label != "grid")) is { } floor)
+        {
+            var grids = panels.SelectMany(panel => ((LinePanel)panel).Curves).Where(curve => curve.Label == "grid").SelectMany(curve => curve.Y.Skip(1)).Where(error => error > 0).ToList();
+            if (grids.Count > 0 && grids.Max() < floor / GridReach)
+            {
+                gridNote = $" The grid's part lies below the scale: at most {Shown(grids.Max())}{(labels.Length is null ? "" : " " + labels.Length)}.";
+                panels = [.. panels.Select(panel => (Panel)((LinePanel)panel with { Curves = [.. ((LinePanel)panel).Curves.Where(curve => curve.Label != "grid")] }))];
+            }
+            else if (grids.Count > 0)
+            {
+                floor = Math.Min(floor, Math.Max(grids.Min(), floor / GridReach) / 1.6);
+            }
+
             panels = [.. panels.Select(panel => (Panel)((LinePanel)panel with { YFrom = floor }))];
+        }
+
         return new Figure(
             "error-budget", "What the error of each ensemble is made of",
-            "Where the total follows the step bias, a smaller step helps; where it lies in the noise band, only more walkers would show more.",
+            "Where the total follows the step bias, a smaller step helps; where it lies in the noise band, only more walkers would show more." + gridNote,
             panels, Math.Min(2, panels.Count));
     }
 
@@ -338,13 +358,22 @@ public static class RunFigures
         return double.IsFinite(low) ? Math.Max(low, high / 1e5) / 1.6 : null;
     }
 
-    private static void AddGridError(ComparisonResult result, FigureStyle style, List<Curve> curves)
+    // The yardstick's own error, where the scale reaches that far down: a fine grid's would press everything else together.
+    private static string AddGridError(ComparisonResult result, CaseLabels labels, FigureStyle style, List<Curve> curves, ref double? floor)
     {
-        if (result.GridErrors.All(error => error is null or 0))
-            return;
-        double[] times = [.. result.Plan.ReportTimes.Take(result.GridErrors.Count)];
-        curves.Add(new Curve("grid error of the exact flow", times, [.. result.GridErrors.Take(times.Length).Select(error => error ?? double.NaN)], style.Equilibrium));
+        var errors = result.GridErrors.Take(result.Plan.ReportTimes.Count).ToList();
+        var known = errors.Skip(1).Where(error => error is > 0).Select(error => error!.Value).ToList();
+        if (known.Count == 0)
+            return "";
+        if (floor is { } low && known.Max() < low / GridReach)
+            return $" The grid error lies below the scale: at most {Shown(known.Max())}{(labels.Length is null ? "" : " " + labels.Length)}.";
+        curves.Add(new Curve("grid error of the exact flow", [.. result.Plan.ReportTimes.Take(errors.Count)], [.. errors.Select(error => error ?? double.NaN)], style.Equilibrium));
+        floor = Math.Min(floor ?? double.PositiveInfinity, Math.Max(known.Min(), (floor ?? known.Min()) / GridReach) / 1.6);
+        return "";
     }
+
+    // How far below everything else the grid error may lie and still be drawn, as a factor.
+    private const double GridReach = 30;
 
     private static string NoiseLabel(ComparisonResult result)
         => string.Create(CultureInfo.InvariantCulture, $"noise of {result.WalkerCount} walkers, up to its 95 % point");

@@ -210,7 +210,9 @@ public static class GatherPage
 
         return new LinePanel("", CaseLabels.WithUnit("time", labels.Time), CaseLabels.WithUnit(title, unit))
         {
-            Curves = curves, YIsLogarithmic = true, YFrom = method == "exact" ? null : RunFigures.Floor(curves),
+            Curves = curves,
+            YIsLogarithmic = true,
+            YFrom = method == "exact" ? null : RunFigures.Floor(curves),
         };
     }
 

@@ -75,7 +75,7 @@ public static class RunFindings
         if (findings.Count == 0)
             return new Verdict(VerdictTone.Sound, "The exact flow was computed; there was nothing to compare it with.", reasons);
         if (off.Count == 0)
-            return new Verdict(VerdictTone.Sound, unmeasured.Count == findings.Count ? "No distance from the exact flow was measured." : "No method differs from the exact flow by more than grid error and noise explain." + gap, reasons);
+            return unmeasured.Count == findings.Count ? new Verdict(VerdictTone.Attention, "No distance from the exact flow was measured.", reasons) { Word = "no comparison" } : new Verdict(VerdictTone.Sound, "No method differs from the exact flow by more than grid error and noise explain." + gap, reasons);
         var first = off[0];
         var headline = string.Create(CultureInfo.InvariantCulture,
             $"{first.Method} is furthest off: {Length(first.Worst!.DistanceToExact!.Value.Distance, labels)} from the exact flow at {AtTime(first.Worst.Time, labels)}{Share(result, first.Worst)}, {first.Cause}.");
@@ -152,7 +152,6 @@ public static class RunFindings
             parts.Add($"noise of {result.WalkerCount.ToString(CultureInfo.InvariantCulture)} walkers reaches {Length(noise, labels)} (95{Space}%)");
         if (peak.GridError is { } grid)
             parts.Add($"the grid adds {Length(grid, labels)}");
-        var quiet = budget.Count - loud.Count;
         return new MethodFinding(
             method, SeriesKind.Ensemble, worst, rows[^1], peak, peak.GridError, isOff, false, cause,
             $"{method}: at most {Length(peak.Total!.Value, labels)} from the exact flow, at {AtTime(peak.Time, labels)}{(parts.Count > 0 ? "; there " + Listed(parts) : "")}. "
