@@ -8,9 +8,11 @@ internal static class PeerRows
 {
     public static IReadOnlyList<PeerRow> Peers { get; } =
     [
+        ExactFlowBenchmarks.Peer,
     ];
 
     public static IReadOnlyList<GrowthRow> Growth { get; } =
     [
+        ExactFlowBenchmarks.Growth,
     ];
 }

@@ -75,7 +75,8 @@ public static class Chebyshev
         ScaledBesselI(s, all);
         for (var k = 1; k <= top; k++)
             all[k] *= 2;
-        var left = 0.0;
+        // What lies above the last coefficient computed is below e⁻⁴ of the tolerance.
+        var left = 0.02 * tolerance;
         var count = top + 1;
         while (count > 1)
         {

@@ -230,7 +230,7 @@ internal sealed unsafe class ChebyshevPropagator
             var at = (long)row * pitch;
             var next = odd + at;
             new Span<double>(next - Margin, stride).Clear();
-            Product(row, next, even, 0, 0, 0, vectors * Lane);
+            Product(row, next, even, 0, 0, 0, vectors * Lane, next);
             var here = even + at;
             for (var i = 0; i < nx; i++)
             {
@@ -260,7 +260,7 @@ internal sealed unsafe class ChebyshevPropagator
                 {
                     var row = front - (k - 1);
                     if (row >= from + shrinkLow * (k - 1) && row < to - shrinkHigh * (k - 1))
-                        NextLevel(row, k, chunk);
+                        NextLevel(row, k, chunk, Math.Min(front + 1, to - 1));
                 }
             }
         }
@@ -277,13 +277,14 @@ internal sealed unsafe class ChebyshevPropagator
             for (var k = 2; k <= levels; k++)
             {
                 for (var row = seam - (k - 1); row < seam + (k - 1); row++)
-                    NextLevel(row < 0 ? row + ny : row, k, chunk);
+                    NextLevel(row < 0 ? row + ny : row, k, chunk, Math.Min(seam + k, ny - 1));
             }
         }
     }
 
-    // Level k of the round in one row, for the chunk of columns shifted to the left by a vector a level.
-    private void NextLevel(int row, int k, int chunk)
+    // Level k of the round in one row, for the chunk of columns shifted to the left by a vector a level. On the way one of the eight arrays of
+    // the row that comes next is fetched from memory, so that the first level there need not wait for it.
+    private void NextLevel(int row, int k, int chunk, int nextRow)
     {
         var end = vectors * Lane;
         var from = chunk == 0 ? 0 : chunk - Lane * (k - 1);
@@ -292,13 +293,14 @@ internal sealed unsafe class ChebyshevPropagator
         var target = (order & 1) == 0 ? even : odd;
         var source = (order & 1) == 0 ? odd : even;
         var next = target + (long)row * pitch;
+        var ahead = center + (long)nextRow * pitch + ((k - 1) & 7) * stride;
         // The sum takes two levels at a time, which halves its traffic; the last one alone when their number is even.
         if ((order & 1) == 1)
-            Product(row, next, source, coefficients[order - 1], coefficients[order], from, to);
+            Product(row, next, source, coefficients[order - 1], coefficients[order], from, to, ahead);
         else if (order == lastOrder)
-            Product(row, next, source, 0, coefficients[order], from, to);
+            Product(row, next, source, 0, coefficients[order], from, to, ahead);
         else
-            Product(row, next, source, 0, 0, from, to);
+            Product(row, next, source, 0, 0, from, to, ahead);
         CloseRow(next);
     }
 
@@ -311,7 +313,7 @@ internal sealed unsafe class ChebyshevPropagator
     }
 
     // next ← 2B·here − next, sum ← sum + weightHere·here + weightNext·next, for one row.
-    private void Product(int row, double* next, double* source, double weightHere, double weightNext, int from, int to)
+    private void Product(int row, double* next, double* source, double weightHere, double weightNext, int from, int to, double* ahead)
     {
         var at = (long)row * pitch;
         var here = source + at;
@@ -325,14 +327,15 @@ internal sealed unsafe class ChebyshevPropagator
         var below = row > 0 ? here - pitch : periodicY ? source + (long)(ny - 1) * pitch : here;
         var above = row < ny - 1 ? here + pitch : periodicY ? source : here;
         if (Avx512F.IsSupported)
-            WideProduct(next, here, below, above, total, at, weightHere, weightNext, from, to);
+            WideProduct(next, here, below, above, total, at, weightHere, weightNext, from, to, ahead);
         else
             NarrowProduct(next, here, below, above, total, at, weightHere, weightNext, from, to);
     }
 
     // The neighbours along the row are cut from the vectors before, at and after it: loads that straddle cache lines cost twice.
     private void WideProduct(
-        double* next, double* here, double* below, double* above, double* total, long at, double weightHere, double weightNext, int from, int to)
+        double* next, double* here, double* below, double* above, double* total, long at, double weightHere, double weightNext, int from, int to,
+        double* ahead)
     {
         var c = center + at;
         var l = fromLeft + at;
@@ -345,6 +348,7 @@ internal sealed unsafe class ChebyshevPropagator
         var middle = Vector512.LoadAligned(here + from);
         for (var i = from; i < to; i += Lane)
         {
+            Sse.Prefetch1(ahead + i);
             var after = Vector512.LoadAligned(here + i + Lane);
             var value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(c + i), middle, -Vector512.LoadAligned(next + i));
             value = Avx512F.FusedMultiplyAdd(Vector512.LoadAligned(l + i), Shifted(middle, before, 7), value);

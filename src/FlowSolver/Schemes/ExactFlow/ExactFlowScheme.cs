@@ -98,6 +98,12 @@ internal sealed class ExactFlowRun : FlowRun
         while (left > 0)
         {
             var global = reach.Global(density);
+            if (global > mostReach)
+            {
+                DropTails();
+                global = reach.Global(density);
+            }
+
             if (global <= mostReach)
             {
                 work += Whole(left, global);
@@ -182,14 +188,29 @@ internal sealed class ExactFlowRun : FlowRun
         SpanKernels.Scale(density, startMass / mass);
     }
 
-    // max ρ/π, which the flow never raises; infinite where π underflows under the start.
+    // Cells that hold next to nothing far up the potential would decide the length of the steps. The flow fills them again at once.
+    private void DropTails()
+    {
+        var least = Negligible;
+        for (var i = 0; i < density.Length; i++)
+        {
+            if (density[i] < least)
+                density[i] = 0;
+        }
+    }
+
+    // All cells below it together hold less than 1e-16 of the mass.
+    private double Negligible => 1e-16 * startMass / density.Length;
+
+    // max ρ/π over cells that matter, which the flow never raises; infinite where π underflows under the start.
     private double HighestRatio()
     {
         var equilibrium = Problem.Equilibrium.Values;
+        var least = Negligible;
         var highest = 0.0;
         for (var i = 0; i < density.Length; i++)
         {
-            if (density[i] > 0)
+            if (density[i] >= least)
                 highest = Math.Max(highest, density[i] / equilibrium[i]);
         }
 
