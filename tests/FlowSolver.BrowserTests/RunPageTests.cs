@@ -6,8 +6,8 @@ using Microsoft.Playwright;
 namespace FlowSolver.BrowserTests;
 
 /// <summary>
-/// The page as a reader uses it. Mutations tried: the slider's handler no longer tells the readouts (slider test fails); the readout's rounding
-/// set to 3 digits (numbers test fails); an image from another address put into the frame (request test fails).
+/// The page as a reader uses it. Mutations tried, each seen to fail: the slider no longer tells the readouts; numbers rounded to 3 digits; an image
+/// from another address in the frame; no rules for print; a paler colour for lesser text.
 /// </summary>
 public sealed class RunPageTests(Browser browser) : IClassFixture<Browser>
 {

@@ -41,7 +41,7 @@ public sealed class FigureTests : IDisposable
         }
     }
 
-    // Mutation tried: FigureWriter made to write PNG although withoutSkia was set; fails on the list of files.
+    // Mutation tried: the writer takes it that the drawing library works; fails on the list of files.
     [Fact]
     public void Write_WithoutTheDrawingLibrary_StillGivesSvgAndSaysWhy()
     {

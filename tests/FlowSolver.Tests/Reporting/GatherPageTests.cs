@@ -18,7 +18,7 @@ public sealed class GatherPageTests : IDisposable
         return folder;
     }
 
-    // Mutation tried: MaxBy in Worst replaced by the first row; fails on the headline.
+    // Mutation tried: the worst row of a method replaced by its first; fails on the headline.
     [Fact]
     public void Model_OfTwoSteps_NamesWhatDiffersAndWhereEachMethodIsClosest()
     {

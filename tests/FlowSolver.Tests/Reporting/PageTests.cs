@@ -44,7 +44,7 @@ public sealed class PageTests : IDisposable
         Assert.DoesNotContain("{{", Regex.Replace(html, "<script.*?</script>|<style.*?</style>", "", RegexOptions.Singleline), StringComparison.Ordinal);
     }
 
-    // Mutation tried: the budget of the page rounded to 6 digits; fails.
+    // Mutation tried: the numbers of the page's tables rounded to 6 digits; fails.
     [Theory]
     [InlineData(1)]
     [InlineData(2)]

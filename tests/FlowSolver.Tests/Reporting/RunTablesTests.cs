@@ -14,8 +14,8 @@ using PureHDF;
 namespace FlowSolver.Tests.Reporting;
 
 /// <summary>
-/// Golden text of the tables. Mutation tried: the invariant culture of the CSV options and of <see cref="Numbers.Exact"/> replaced by the
-/// current one; the theory over cultures fails (decimal commas).
+/// Golden text of the tables. Mutation tried: the invariant culture of <see cref="Numbers.Exact"/> replaced by the current one; the theories
+/// over cultures fail (decimal commas).
 /// </summary>
 public sealed class RunTablesTests : IDisposable
 {
@@ -92,7 +92,7 @@ public sealed class RunTablesTests : IDisposable
         Assert.Equal(Expected, Encoding.UTF8.GetString(stream.ToArray()));
     }
 
-    // Mutation tried: the check in the constructor of Table removed; both cases fail.
+    // Mutation tried: the check in the constructor of Table made void; both cases fail.
     [Theory]
     [InlineData(double.NaN, "not a number")]
     [InlineData(double.NegativeInfinity, "minus infinity")]
