@@ -85,7 +85,7 @@ public sealed class NoiseFloor
         Require.AtLeast(count, 1);
         Require.AtLeast(draws, 1);
         if (density.Grid.Dimension != 1)
-            return null;
+            return PlaneNoiseFloor.Simulate(density, count, draws, seed, team, cancellation);
         var simulation = new Simulation(density, count, seed);
         var found = new double[draws];
         team.Run(draws, draw =>

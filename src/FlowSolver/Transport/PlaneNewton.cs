@@ -9,8 +9,8 @@ namespace FlowSolver.Transport;
 /// </summary>
 /// <remarks>
 /// Newton on the logarithm of the Monge-Ampère equation (G. Loeper, F. Rapetti, C. R. Acad. Sci. Paris 340 (2005) 319-324, with damping): with
-/// R = log b − log a(y + ∇φ) − log det(I + D²φ) the update solves −∇·(b (I + D²φ)⁻¹ ∇δ) = −b (R − mean of R under b). Departures: divergence
-/// form, hence a symmetric system; a floor of 10⁻¹² of the largest weight continues the update harmonically into the tails. Derivatives by
+/// R = log b − log a(y + ∇φ) − log det(I + D²φ) the update solves −∇·(w (I + D²φ)⁻¹ ∇δ) = −w (R − mean of R under w). Departures: divergence
+/// form with the weight w = √(b · pulled density) (exact at the solution, and half way between the two gradients of log density far from it); a floor of 10⁻¹² of the largest weight continues the update harmonically into the tails. Derivatives by
 /// differences of fourth order, even across walls where mass touches them; log a between the cells by the cubic through four neighbours an axis. R is formed from differences
 /// of logarithms, so that densities that differ by 10⁻⁸ still give digits. For normal densities log R is a quadratic and a few steps do.
 /// </remarks>
@@ -54,6 +54,7 @@ internal sealed class PlaneNewton
     private readonly double[] stiffXY;
     private readonly double[] stiffYY;
     private readonly double[] mismatch;
+    private readonly double[] weights;
     private readonly double[] partial;
     private readonly Action<int> paddingJob;
     private readonly Action<int> slopeJob;
@@ -91,6 +92,7 @@ internal sealed class PlaneNewton
         stiffXY = new double[cells];
         stiffYY = new double[cells];
         mismatch = new double[cells];
+        weights = new double[cells];
         partial = new double[24 * blocks];
         paddingJob = Pad;
         slopeJob = Slope;
@@ -200,7 +202,7 @@ internal sealed class PlaneNewton
         // Mean of R under b, so that the right side adds up to 0 without touching the tails.
         var mean = SumPartials(1) / SumPartials(2);
         for (var i = 0; i < right.Length; i++)
-            right[i] = -target[i] * (target[i] / (target[i] + fade)) * (mismatch[i] - mean);
+            right[i] = -weights[i] * (mismatch[i] - mean);
         var largest = SpanKernels.MaxAbs(target);
         for (var i = 0; i < target.Length; i++)
         {
@@ -210,6 +212,7 @@ internal sealed class PlaneNewton
 
         team.Run(blocks, stiffnessJob);
         elliptic.Prepare();
+        // Loosely: what is left out are roughnesses of the tails, where the equation says little.
         LinearIterations += elliptic.Solve(right, update, Math.Clamp(0.1 * Residual, 1e-7, 1e-3), 60);
     }
 
@@ -354,7 +357,9 @@ internal sealed class PlaneNewton
                 }
 
                 Pulled[cell] = pulled;
-                var faded = b * (b / (b + fade));
+                var between = b * Math.Exp(-Math.Clamp(0.5 * r, -1, 40));
+                var faded = between * (b / (b + fade));
+                weights[cell] = faded;
                 weighted += faded * r;
                 weight += faded;
                 stiffXX[cell] = faded * inverseXX;

@@ -19,7 +19,7 @@ public static class SampleDistance
         ArgumentNullException.ThrowIfNull(team);
         Require.Length(y.Length, density.Grid.Y is null ? 0 : x.Length);
         if (density.Grid.Dimension != 1)
-            return null;
+            return PlaneTransport.BetweenSamples(x, y, density, team);
         var interval = density.Grid.X.Interval;
         var sorted = Ascending(x, interval);
         return TransportBracket.Exact(density.Grid.X.IsPeriodic
