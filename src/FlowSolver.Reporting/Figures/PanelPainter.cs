@@ -334,7 +334,7 @@ internal sealed class PanelPainter(FigureStyle style)
         if (logarithmic)
         {
             low = Math.Max(low, high / GreatestSpan);
-            return high / low < 20 ? (low / 3, high * 3) : (low / 1.5, high * 1.5);
+            return (low / 1.6, high * 1.6);
         }
 
         var pad = high > low ? 0.06 * (high - low) : Math.Max(1e-3, Math.Abs(high) * 0.1);

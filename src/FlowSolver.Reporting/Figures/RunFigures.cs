@@ -265,13 +265,13 @@ public static class RunFigures
                 panels.Add(MapOf(result, labels, style, density, density.Values.Max(), levels) with
                 {
                     Title = (report == reports[0] ? walkers.Sampler + ", " : "") + TimeTitle(result.Plan.ReportTimes[report], labels),
-                    PointsX = [.. walkers.X[report].Take(400)],
-                    PointsY = [.. walkers.Y[report].Take(400)],
+                    PointsX = [.. walkers.X[report].Take(MostWalkers)],
+                    PointsY = [.. walkers.Y[report].Take(MostWalkers)],
                 });
             }
         }
 
-        var shown = Math.Min(400, result.Walkers.Max(walkers => walkers.X.Count > 0 ? walkers.X[0].Length : 0));
+        var shown = Math.Min(MostWalkers, result.Walkers.Max(walkers => walkers.X.Count > 0 ? walkers.X[0].Length : 0));
         return new Figure(
             "walkers", "Walkers over the density of the " + (background.Method == "exact" ? "exact flow" : background.Method),
             string.Create(CultureInfo.InvariantCulture, $"Each row is an ensemble, each column a time: the first {shown} of {result.WalkerCount} walkers. Every map is scaled to its own greatest density."),
@@ -371,6 +371,9 @@ public static class RunFigures
         floor = Math.Min(floor ?? double.PositiveInfinity, Math.Max(known.Min(), (floor ?? known.Min()) / GridReach) / 1.6);
         return "";
     }
+
+    // Walkers drawn in one map.
+    private const int MostWalkers = 250;
 
     // How far below everything else the grid error may lie and still be drawn, as a factor.
     private const double GridReach = 30;

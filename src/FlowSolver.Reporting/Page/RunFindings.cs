@@ -107,7 +107,7 @@ public static class RunFindings
             "findings",
             [
                 new("method"), new("kind"), new("w2_exact", "largest W2 to exact", labels.Length), new("time", "at t", labels.Time), new("w2_exact_last", "W2 at the end", labels.Length),
-                new("step_bias_w2", "of which step", labels.Length), new("noise_w2_p95", "noise, 95 %", labels.Length), new("grid_w2", "grid", labels.Length), new("verdict"),
+                new("step_bias_w2", "of which step", labels.Length), new("noise_w2_p95", "noise, 95" + Space + "%", labels.Length), new("grid_w2", "grid", labels.Length), new("verdict"),
             ], rows);
     }
 
@@ -196,12 +196,15 @@ public static class RunFindings
     }
 
     // Three digits in prose; tables and readouts carry more.
-    internal static string Length(double value, CaseLabels labels) => Numbers.Short(value, 3) + (labels.Length is null ? "" : Space + labels.Length);
+    internal static string Length(double value, CaseLabels labels) => Readable(value) + (labels.Length is null ? "" : Space + labels.Length);
 
-    internal static string Time(double value, CaseLabels labels) => Numbers.Short(value) + (labels.Time is null ? "" : Space + labels.Time);
+    internal static string Time(double value, CaseLabels labels) => Numbers.Short(value).Replace('-', '−') + (labels.Time is null ? "" : Space + labels.Time);
 
     /// <summary>t = so much, in one piece.</summary>
     internal static string AtTime(double value, CaseLabels labels) => "t" + Space + "=" + Space + Time(value, labels);
+
+    // A true minus sign, at which no line breaks.
+    private static string Readable(double value) => Numbers.Short(value, 3).Replace('-', '−');
 
     internal static string Listed(IReadOnlyList<string> names) => names.Count switch
     {

@@ -70,7 +70,7 @@ public static class RunPage
         var problem = result.Problem;
         var flows = result.Series.Where(row => row.Kind == SeriesKind.Flow).Select(row => row.Method).Distinct().ToList();
         var samplers = result.Series.Where(row => row.Kind == SeriesKind.Ensemble).Select(row => row.Method).Distinct().ToList();
-        var text = $"How does the density move from t = 0 to {RunFindings.Time(result.Plan.ReportTimes[^1], labels)} in V = {problem.Potential.Description} at T = {Numbers.Short(problem.Temperature)}{Unit(labels.Energy)}";
+        var text = $"How does the density move from t{RunFindings.Space}={RunFindings.Space}0 to {RunFindings.Time(result.Plan.ReportTimes[^1], labels)} in V = {problem.Potential.Description} at T{RunFindings.Space}={RunFindings.Space}{Numbers.Short(problem.Temperature)}{Unit(labels.Energy)}";
         if (problem.Mobility != 1)
             text += $" with mobility {Numbers.Short(problem.Mobility)}";
         text += $", from {Start(problem.Start)}, and how closely do ";
@@ -85,7 +85,7 @@ public static class RunPage
         return text + string.Join(", and ", parts) + $" follow the exact flow at a step of {RunFindings.Time(result.Plan.Step, labels)}?";
     }
 
-    private static string Unit(string? unit) => unit is null ? "" : " " + unit;
+    private static string Unit(string? unit) => unit is null ? "" : RunFindings.Space + unit;
 
     private static string Start(StartDensity start) => start switch
     {
@@ -105,7 +105,7 @@ public static class RunPage
         if (result.GridErrors.Max() is { } grid)
             numbers.Add(new KeyNumber("grid error of the exact flow", grid, labels.Length, "W2, from half the cells"));
         if (result.Budget.Max(row => row.Noise95) is { } noise)
-            numbers.Add(new KeyNumber("noise floor", noise, labels.Length, string.Create(CultureInfo.InvariantCulture, $"W2, 95 % point, {result.WalkerCount} walkers")));
+            numbers.Add(new KeyNumber("noise floor", noise, labels.Length, string.Create(CultureInfo.InvariantCulture, $"W2, 95\u00a0% point, {result.WalkerCount} walkers")));
         if (result.Series.LastOrDefault(row => row.Method == "exact") is { RelativeEntropy: { } entropy } last)
             numbers.Add(new KeyNumber("left to equilibrium at the end", entropy, null, $"relative entropy, {RunFindings.AtTime(last.Time, labels)}"));
         if (result.Steps.Where(row => row.DualGap is not null).MaxBy(row => row.DualGap) is { DualGap: { } gap } step)

@@ -238,7 +238,7 @@
     const now = () => it.times[index];
 
     // Time bar.
-    const slider = element("input", { type: "range", id: "time", min: "0", max: String(it.times.length - 1), step: "1", value: "0" });
+    const slider = element("input", { type: "range", id: "time", "aria-label": "Time", min: "0", max: String(it.times.length - 1), step: "1", value: "0" });
     const output = element("output", { for: "time", id: "time-shown" });
     const earlier = element("button", { type: "button", "aria-label": "Earlier report time" }, "◀");
     const later = element("button", { type: "button", "aria-label": "Later report time" }, "▶");
@@ -272,8 +272,8 @@
     const bar = element("div", { class: "timebar" }, element("label", { for: "time" }, "Time"), earlier, slider, later, play, output);
     const switches = element("fieldset", { class: "switches" }, element("legend", {}, "Shown"));
     for (const method of it.methods) switches.append(switchFor(method.name, method.look));
-    const controls = element("div", { class: "controls" }, bar, switches);
-    host.append(controls);
+    // The time stays in sight while what it moves is looked at.
+    host.append(bar, switches);
 
     const stage = element("div", { class: "stage " + it.kind });
     host.append(stage);

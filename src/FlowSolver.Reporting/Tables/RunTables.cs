@@ -68,7 +68,7 @@ public static class RunTables
             "budget",
             [
                 new("time", "time", time), new("sampler"), new("total_w2", "total", length), new("step_bias_w2", "step bias", length),
-                new("noise_w2_mean", "noise, mean", length), new("noise_w2_p95", "noise, 95 %", length), new("grid_w2", "grid", length),
+                new("noise_w2_mean", "noise, mean", length), new("noise_w2_p95", "noise, 95\u00a0%", length), new("grid_w2", "grid", length),
                 new("p_value", "p-value"), new("verdict"),
             ],
             [.. result.Budget.Select(row => (IReadOnlyList<Cell>)[row.Time, row.Sampler, row.Total, row.StepBias, row.NoiseMean, row.Noise95, row.GridError, row.PValue, row.Verdict])],

@@ -144,6 +144,7 @@ public static class TableWriter
                 'ρ' => escaped.Append("$\\rho$"),
                 '²' => escaped.Append("$^2$"),
                 '−' => escaped.Append("$-$"),
+                '\u00a0' => escaped.Append('~'),
                 _ => escaped.Append(c),
             };
         }

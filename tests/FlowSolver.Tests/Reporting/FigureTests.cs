@@ -90,6 +90,27 @@ public sealed class FigureTests : IDisposable
         Assert.Equal(SampleRuns.Line().Budget.Where(row => row.Sampler == "ula").Select(row => row.Noise95!.Value), band.High);
     }
 
+    // Mutation tried: the reach of the scale made boundless; the curve comes back and the caption says nothing.
+    [Fact]
+    public void DistanceAndBudget_OverAFineGrid_SayTheGridErrorInsteadOfStretchingTheScale()
+    {
+        var sample = SampleRuns.Line();
+        var fine = sample with
+        {
+            GridErrors = [.. sample.GridErrors.Select(_ => (double?)2.5e-9)],
+            Budget = [.. sample.Budget.Select(row => row with { GridError = 2.5e-9 })],
+        };
+        var figures = RunFigures.All(fine, SampleRuns.Labels);
+        var distance = figures.Single(figure => figure.Name == "distance");
+        var panel = (LinePanel)distance.Panels[0];
+        Assert.EndsWith("The grid error lies below the scale: at most 2.5e−9 µm.", distance.Caption, StringComparison.Ordinal);
+        Assert.DoesNotContain(panel.Curves, curve => curve.Label == "grid error of the exact flow");
+        Assert.InRange(panel.YFrom!.Value, 1e-3, 1e-2);
+        var budget = figures.Single(figure => figure.Name == "error-budget");
+        Assert.EndsWith("The grid's part lies below the scale: at most 2.5e−9 µm.", budget.Caption, StringComparison.Ordinal);
+        Assert.All(budget.Panels, part => Assert.DoesNotContain(((LinePanel)part).Curves, curve => curve.Label == "grid"));
+    }
+
     [Fact]
     public void Looks_TellMethodsApartWithoutColour()
     {
