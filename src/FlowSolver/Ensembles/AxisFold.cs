@@ -26,6 +26,39 @@ internal readonly struct AxisFold
     /// <summary>A deterministic move beyond it is a blow-up.</summary>
     public double LargestMove { get; }
 
+    /// <summary>Folds a span whose length is a multiple of 8; only looks at it when all of it lies inside.</summary>
+    public void FoldInPlace(Span<double> x)
+    {
+        ref var positions = ref MemoryMarshal.GetReference(x);
+        var lowest = Vector512.Create(from);
+        var highest = Vector512.Create(to);
+        // Two chains each: one would wait for itself.
+        var lowestToo = lowest;
+        var highestToo = highest;
+        nuint i = 0;
+        for (; i + 16 <= (nuint)x.Length; i += 16)
+        {
+            var position = Vector512.LoadUnsafe(ref positions, i);
+            var other = Vector512.LoadUnsafe(ref positions, i + 8);
+            lowest = Vector512.MinNative(lowest, position);
+            highest = Vector512.MaxNative(highest, position);
+            lowestToo = Vector512.MinNative(lowestToo, other);
+            highestToo = Vector512.MaxNative(highestToo, other);
+        }
+
+        for (; i < (nuint)x.Length; i += 8)
+        {
+            var position = Vector512.LoadUnsafe(ref positions, i);
+            lowest = Vector512.MinNative(lowest, position);
+            highest = Vector512.MaxNative(highest, position);
+        }
+
+        lowest = Vector512.MinNative(lowest, lowestToo);
+        highest = Vector512.MaxNative(highest, highestToo);
+        if (!Vector512.EqualsAll(lowest, Vector512.Create(from)) || !Vector512.EqualsAll(highest, Vector512.Create(to)))
+            Fold(x, x);
+    }
+
     [MethodImpl(MethodImplOptions.AggressiveInlining)]
     public Vector512<double> Fold(Vector512<double> x)
     {

@@ -158,7 +158,7 @@ public sealed class ProximalMap
         }
 
         var padded = (x.Length + 7) & ~7;
-        Span<double> storage = stackalloc double[8 * Chunk];
+        var storage = AlignedScratch.Of(stackalloc double[8 * Chunk + AlignedScratch.Slack], 8 * Chunk);
         var point = storage[..padded];
         x.CopyTo(point);
         // Padding repeats the last point: it costs nothing more and cannot fail alone.
@@ -290,7 +290,7 @@ public sealed class ProximalMap
     [SkipLocalsInit]
     private int Apply2(double t, ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> targetX, Span<double> targetY)
     {
-        Span<double> storage = stackalloc double[20 * PlaneChunk];
+        var storage = AlignedScratch.Of(stackalloc double[20 * PlaneChunk + AlignedScratch.Slack], 20 * PlaneChunk);
         var missed = 0;
         for (var first = 0; first < x.Length; first += PlaneChunk)
         {

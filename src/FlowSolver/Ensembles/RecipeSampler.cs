@@ -104,9 +104,7 @@ internal sealed class RecipeRun : TiledRun
     [SkipLocalsInit]
     protected override void AdvanceTile(int first, int count, Span<double> x, Span<double> y, bool compare, ref BlockOutcome outcome)
     {
-        Span<double> noise = stackalloc double[TileLength];
-        Span<double> storage = stackalloc double[2 * TileLength];
-        noise = noise[..x.Length];
+        var storage = AlignedScratch.Of(stackalloc double[2 * TileLength + AlignedScratch.Slack], 2 * TileLength);
         var gradientX = storage[..x.Length];
         var gradientY = IsPlane ? storage.Slice(TileLength, x.Length) : [];
         for (var p = 0; p < parts.Length; p++)
@@ -114,12 +112,9 @@ internal sealed class RecipeRun : TiledRun
             switch (parts[p].Map)
             {
                 case null:
-                    DrawNormals(StreamPurpose.Noise + 2 * (uint)p, first, noise);
-                    AddNoise(FoldX, deviations[p], noise, x);
-                    if (!IsPlane)
-                        break;
-                    DrawNormals(StreamPurpose.Noise + 2 * (uint)p + 1, first, noise);
-                    AddNoise(FoldY, deviations[p], noise, y);
+                    AddNoise(FoldX, deviations[p], StreamPurpose.Noise + 2 * (uint)p, first, x);
+                    if (IsPlane)
+                        AddNoise(FoldY, deviations[p], StreamPurpose.Noise + 2 * (uint)p + 1, first, y);
                     break;
                 case TransportMap.Gradient:
                     Problem.Potential.Gradient(x, y, gradientX, gradientY);
@@ -127,9 +122,11 @@ internal sealed class RecipeRun : TiledRun
                         CompareEnergies(times[p], count, x, y, gradientX, gradientY, ref outcome);
                     // An explicit move and the noise after it are one pass: the fold in between would not change the law.
                     var noisy = p + 1 < parts.Length && parts[p + 1].Map is null;
-                    Push(FoldX, p, noisy, 0, first, count, noise, gradientX, x, ref outcome);
+                    var deviation = noisy ? deviations[p + 1] : 0;
+                    var purpose = StreamPurpose.Noise + 2 * (uint)(p + 1);
+                    Move(FoldX, times[p], gradientX, deviation, purpose, x, first, count, ref outcome);
                     if (IsPlane)
-                        Push(FoldY, p, noisy, 1, first, count, noise, gradientY, y, ref outcome);
+                        Move(FoldY, times[p], gradientY, deviation, purpose + 1, y, first, count, ref outcome);
                     if (noisy)
                         p++;
                     break;
@@ -141,24 +138,6 @@ internal sealed class RecipeRun : TiledRun
                     break;
             }
         }
-    }
-
-    private void Push(
-        AxisFold fold, int part, bool noisy, uint axis, int first, int count, Span<double> noise, Span<double> gradient, Span<double> x, ref BlockOutcome outcome)
-    {
-        bool thrown;
-        if (noisy)
-        {
-            DrawNormals(StreamPurpose.Noise + 2 * (uint)(part + 1) + axis, first, noise);
-            thrown = MoveWithNoise(fold, times[part], gradient, deviations[part + 1], noise, x);
-        }
-        else
-        {
-            thrown = Move(fold, times[part], gradient, x);
-        }
-
-        if (thrown)
-            CountThrown(fold, times[part], gradient, first, count, ref outcome);
     }
 
     private static void NoteMissed(int missed, int first, int count, ref BlockOutcome outcome)

@@ -1,3 +1,4 @@
+using System.Runtime.CompilerServices;
 using FlowSolver.Foundation;
 using FlowSolver.Problems;
 using FlowSolver.Schemes;
@@ -42,12 +43,21 @@ public abstract class EnsembleRun
         ArgumentNullException.ThrowIfNull(team);
         Problem = problem;
         Team = team;
-        WalkersX = new double[Require.AtLeast(walkers, 1)];
-        WalkersY = problem.Dimension == 2 ? new double[walkers] : [];
+        Count = Require.AtLeast(walkers, 1);
+        (storageX, offsetX) = AlignedArray(walkers);
+        (storageY, offsetY) = problem.Dimension == 2 ? AlignedArray(walkers) : ([], 0);
     }
+
+    private readonly double[] storageX;
+    private readonly double[] storageY;
+    private readonly int offsetX;
+    private readonly int offsetY;
 
     /// <summary>The problem.</summary>
     public Problem Problem { get; }
+
+    /// <summary>Number of walkers.</summary>
+    public int Count { get; }
 
     /// <summary>Time reached.</summary>
     public double Time { get; private set; }
@@ -61,11 +71,11 @@ public abstract class EnsembleRun
     /// <summary>Second coordinates; empty in one dimension.</summary>
     public ReadOnlySpan<double> Y => WalkersY;
 
-    /// <summary>First coordinates, for the sampler to write.</summary>
-    protected double[] WalkersX { get; }
+    /// <summary>First coordinates, for the sampler to write; they begin on a cache line.</summary>
+    protected Span<double> WalkersX => storageX.AsSpan(offsetX, Count);
 
-    /// <summary>Second coordinates, for the sampler to write.</summary>
-    protected double[] WalkersY { get; }
+    /// <summary>Second coordinates, for the sampler to write; empty in one dimension.</summary>
+    protected Span<double> WalkersY => storageY.Length > 0 ? storageY.AsSpan(offsetY, Count) : [];
 
     /// <summary>The threads.</summary>
     protected WorkerTeam Team { get; }
@@ -78,6 +88,14 @@ public abstract class EnsembleRun
         Time += step;
         StepsTaken++;
         return report;
+    }
+
+    /// <summary>An array of numbers, all 0, whose elements from the offset on begin on a cache line and stay there.</summary>
+    private protected static unsafe (double[] Storage, int Offset) AlignedArray(int length)
+    {
+        var storage = GC.AllocateArray<double>(length + 7, pinned: true);
+        var address = (nuint)Unsafe.AsPointer(ref storage[0]);
+        return (storage, (int)((0 - address) % 64) / sizeof(double));
     }
 
     /// <summary>Takes the step; the base keeps time and count. Allocates nothing.</summary>

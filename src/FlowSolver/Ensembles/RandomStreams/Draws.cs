@@ -18,12 +18,14 @@ public readonly record struct UniformDraws(StreamKey Key)
 }
 
 /// <summary>
-/// Standard normal numbers by the Box-Muller transform: numbers i and i + 8 of a batch of 16 are r cos 2πv and r sin 2πv with r = √(−2 ln u).
-/// The largest possible absolute value is 8.57, whose probability is below 10⁻¹⁷.
+/// Standard normal numbers by the Box-Muller transform, two from each word: 40 bits k make u = (2k + 1)/2⁴¹ and the radius √(−2 ln u), 24 bits the
+/// direction, which is uniform over 2²⁴ evenly spaced ones. The largest possible absolute value is 7.54; a normal number is larger with a
+/// probability of 5·10⁻¹⁴.
 /// </summary>
 /// <remarks>
-/// G. E. P. Box, M. E. Muller, A note on the generation of random normal deviates, Ann. Math. Statist. 29 (1958) 610-611. Error of the transform
-/// below 3 units in the last place. Same promise as <see cref="UniformDraws"/>.
+/// Numbers 32j … 32j + 31 are made of words 16j … 16j + 15 of the row: of word i (0 … 7) numbers i and i + 8, of word 8 + i numbers 16 + i and 24 + i.
+/// G. E. P. Box, M. E. Muller, A note on the generation of random normal deviates, Ann. Math. Statist. 29 (1958) 610-611. Error of the transform below
+/// 10⁻¹¹ of the radius. Same promise as <see cref="UniformDraws"/>.
 /// </remarks>
 /// <param name="Key">Which row of words.</param>
 public readonly record struct NormalDraws(StreamKey Key)
@@ -49,62 +51,81 @@ public readonly record struct ExponentialDraws(StreamKey Key)
 // What is drawn, apart from the bits it is drawn from.
 internal static class Draws
 {
-    // 4 KB: bits, then numbers, stay in the first-level cache; two short loops keep their registers, one long loop spills them.
-    private const int Chunk = 512;
+    // Bits, then numbers, stay in the first-level cache; two short loops keep their registers, one long loop spills them.
+    private const int ChunkWords = 256;
 
     internal interface IDistribution
     {
-        // Turns 16 k uniform numbers in place.
-        static abstract void Transform(ref double numbers, int count);
+        // Numbers made of one word.
+        static abstract int NumbersOfWord { get; }
+
+        // Turns words, a multiple of 16, into numbers.
+        static abstract void Transform(ref ulong words, ref double numbers, int wordCount);
     }
 
     internal readonly struct Uniform : IDistribution
     {
-        [MethodImpl(MethodImplOptions.AggressiveInlining)]
-        public static void Transform(ref double numbers, int count) { }
+        public static int NumbersOfWord => 1;
+
+        public static void Transform(ref ulong words, ref double numbers, int wordCount)
+        {
+            for (nuint i = 0; i < (nuint)wordCount; i += 8)
+                ToUnit(Vector512.LoadUnsafe(ref words, i)).StoreUnsafe(ref numbers, i);
+        }
     }
 
     internal readonly struct Exponential : IDistribution
     {
-        public static void Transform(ref double numbers, int count)
+        public static int NumbersOfWord => 1;
+
+        public static void Transform(ref ulong words, ref double numbers, int wordCount)
         {
-            for (nuint i = 0; i < (nuint)count; i += 8)
-                (-VectorMath.LogOfNormal(Vector512.LoadUnsafe(ref numbers, i))).StoreUnsafe(ref numbers, i);
+            for (nuint i = 0; i < (nuint)wordCount; i += 8)
+                (-VectorMath.LogOfNormal(ToUnit(Vector512.LoadUnsafe(ref words, i)))).StoreUnsafe(ref numbers, i);
         }
     }
 
     internal readonly struct Normal : IDistribution
     {
-        public static void Transform(ref double numbers, int count)
+        public static int NumbersOfWord => 2;
+
+        public static void Transform(ref ulong words, ref double numbers, int wordCount)
         {
-            for (nuint i = 0; i < (nuint)count; i += 16)
-            {
-                var radius = Vector512.Sqrt(Vector512.Create(-2.0) * VectorMath.LogOfNormal(Vector512.LoadUnsafe(ref numbers, i)));
-                var (sin, cos) = VectorMath.SinCosOfSmallTurn(Vector512.LoadUnsafe(ref numbers, i + 8));
-                (radius * cos).StoreUnsafe(ref numbers, i);
-                (radius * sin).StoreUnsafe(ref numbers, i + 8);
-            }
+            NormalPairs.Run(ref words, wordCount, 1, new Writer(ref numbers));
+        }
+
+        // Stores the numbers as they come.
+        private readonly ref struct Writer(ref double target) : INormalSink
+        {
+            private readonly ref double target = ref target;
+
+            [MethodImpl(MethodImplOptions.AggressiveInlining)]
+            public void Take(nuint place, Vector512<double> radius, Vector512<double> share)
+                => (radius * share).StoreUnsafe(ref target, place);
         }
     }
 
+    [SkipLocalsInit]
     internal static void Fill<TDistribution>(StreamKey key, ulong offset, Span<double> destination)
         where TDistribution : struct, IDistribution
     {
-        var inside = (int)(offset % Philox.BatchWords);
-        if (inside != 0)
+        var batch = Philox.BatchWords * TDistribution.NumbersOfWord;
+        var words = AlignedScratch.Of(stackalloc ulong[ChunkWords + AlignedScratch.Slack], ChunkWords);
+        ref var bits = ref MemoryMarshal.GetReference(words);
+        var inside = (int)(offset % (uint)batch);
+        if (inside != 0 && destination.Length > 0)
         {
-            var count = Math.Min(destination.Length, Philox.BatchWords - inside);
+            var count = Math.Min(destination.Length, batch - inside);
             FillPart<TDistribution>(key, offset, inside, destination[..count]);
             destination = destination[count..];
             offset += (ulong)count;
         }
 
-        while (destination.Length >= Philox.BatchWords)
+        while (destination.Length >= batch)
         {
-            var count = Math.Min(Chunk, destination.Length - destination.Length % Philox.BatchWords);
-            ref var target = ref MemoryMarshal.GetReference(destination);
-            FillWhole(key, offset, ref target, count);
-            TDistribution.Transform(ref target, count);
+            var count = Math.Min(ChunkWords * TDistribution.NumbersOfWord, destination.Length - destination.Length % batch);
+            Philox.Fill(offset / (uint)TDistribution.NumbersOfWord / 2, key.HighHalf, key.Seed, ref bits, count / TDistribution.NumbersOfWord);
+            TDistribution.Transform(ref bits, ref MemoryMarshal.GetReference(destination), count / TDistribution.NumbersOfWord);
             destination = destination[count..];
             offset += (ulong)count;
         }
@@ -116,36 +137,12 @@ internal static class Draws
     private static void FillPart<TDistribution>(StreamKey key, ulong offset, int inside, Span<double> destination)
         where TDistribution : struct, IDistribution
     {
-        Span<double> batch = stackalloc double[Philox.BatchWords];
-        ref var target = ref MemoryMarshal.GetReference(batch);
-        FillWhole(key, offset - (ulong)inside, ref target, Philox.BatchWords);
-        TDistribution.Transform(ref target, Philox.BatchWords);
-        batch.Slice(inside, destination.Length).CopyTo(destination);
-    }
-
-    private static void FillWhole(StreamKey key, ulong offset, ref double target, int count)
-    {
-        var highHalf = key.HighHalf;
-        var index = offset / 2;
-        nuint i = 0;
-        Span<ulong> roundKeys = stackalloc ulong[Philox.RoundKeys];
-        Philox.ScheduleKeys(key.Seed, roundKeys);
-        // Without 32 wide registers two chains at once would only spill.
-        for (; Vector512.IsHardwareAccelerated && i + 2 * Philox.BatchWords <= (nuint)count; i += 2 * Philox.BatchWords, index += 16)
-        {
-            var (first, second, third, fourth) = Philox.BatchPair(index, highHalf, roundKeys);
-            ToUnit(first).StoreUnsafe(ref target, i);
-            ToUnit(second).StoreUnsafe(ref target, i + 8);
-            ToUnit(third).StoreUnsafe(ref target, i + 16);
-            ToUnit(fourth).StoreUnsafe(ref target, i + 24);
-        }
-
-        for (; i < (nuint)count; i += Philox.BatchWords, index += 8)
-        {
-            var (first, second) = Philox.Batch(index, highHalf, key.Seed);
-            ToUnit(first).StoreUnsafe(ref target, i);
-            ToUnit(second).StoreUnsafe(ref target, i + 8);
-        }
+        Span<ulong> words = stackalloc ulong[Philox.BatchWords];
+        Span<double> numbers = stackalloc double[2 * Philox.BatchWords];
+        ref var bits = ref MemoryMarshal.GetReference(words);
+        Philox.Fill((offset - (ulong)inside) / (uint)TDistribution.NumbersOfWord / 2, key.HighHalf, key.Seed, ref bits, Philox.BatchWords);
+        TDistribution.Transform(ref bits, ref MemoryMarshal.GetReference(numbers), Philox.BatchWords);
+        numbers.Slice(inside, destination.Length).CopyTo(destination);
     }
 
     // The upper 52 bits become the significand of a number in [1, 2); taking off 1 − 2⁻⁵³ leaves (2k + 1)/2⁵³ without rounding.

@@ -74,51 +74,119 @@ public static class Philox
     }
 
     /// <summary>
-    /// Two batches at once, the second one of counters <paramref name="firstIndex"/> + 8 … + 15: two independent chains fill the waiting times of
-    /// each other's multiplications and share the round keys.
+    /// Writes the outputs of successive counters as <see cref="Batch"/> gives them: for every eight counters sixteen words, first halves first.
     /// </summary>
     /// <param name="firstIndex">A multiple of 8.</param>
     /// <param name="highHalf">Words 2 and 3 of the counters, word 2 below.</param>
-    /// <param name="roundKeys">From <see cref="ScheduleKeys"/>.</param>
-    [MethodImpl(MethodImplOptions.AggressiveInlining)]
-    internal static (Vector512<ulong> First, Vector512<ulong> Second, Vector512<ulong> Third, Vector512<ulong> Fourth) BatchPair(
-        ulong firstIndex, ulong highHalf, ReadOnlySpan<ulong> roundKeys)
+    /// <param name="key">Both key words, word 0 below.</param>
+    /// <param name="target">First of the words to write.</param>
+    /// <param name="count">Number of words, a multiple of 16.</param>
+    [SkipLocalsInit]
+    internal static void Fill(ulong firstIndex, ulong highHalf, ulong key, ref ulong target, int count)
     {
-        var c0 = Vector512.Create(firstIndex) + Vector512.Create(0UL, 1, 2, 3, 4, 5, 6, 7);
-        var c1 = Vector512.Create(firstIndex >> 32);
-        var c2 = Vector512.Create(highHalf);
-        var c3 = Vector512.Create(highHalf >> 32);
-        var d0 = Vector512.Create(firstIndex + 8) + Vector512.Create(0UL, 1, 2, 3, 4, 5, 6, 7);
-        var d1 = Vector512.Create((firstIndex + 8) >> 32);
-        var d2 = c2;
-        var d3 = c3;
-        ref var keys = ref MemoryMarshal.GetReference(roundKeys);
-        for (nuint round = 0; round < 2 * Rounds; round += 4)
+        nuint i = 0;
+        // Four batches at once: independent chains fill the waiting times of each other's multiplications. Without 32 wide registers they would spill.
+        if (Vector512.IsHardwareAccelerated && count >= 4 * BatchWords)
         {
-            var k0 = Vector512.Create(Unsafe.Add(ref keys, round));
-            var k1 = Vector512.Create(Unsafe.Add(ref keys, round + 1));
-            Round(ref c0, ref c1, ref c2, ref c3, k0, k1);
-            Round(ref d0, ref d1, ref d2, ref d3, k0, k1);
-            k0 = Vector512.Create(Unsafe.Add(ref keys, round + 2));
-            k1 = Vector512.Create(Unsafe.Add(ref keys, round + 3));
-            Round(ref c0, ref c1, ref c2, ref c3, k0, k1);
-            Round(ref d0, ref d1, ref d2, ref d3, k0, k1);
+            Span<ulong> roundKeys = stackalloc ulong[2 * Rounds];
+            ScheduleKeys(key, roundKeys);
+            for (; i + 4 * BatchWords <= (nuint)count && (uint)firstIndex <= uint.MaxValue - 31; i += 4 * BatchWords, firstIndex += 32)
+                FourBatches(firstIndex, highHalf, ref MemoryMarshal.GetReference(roundKeys), ref Unsafe.Add(ref target, i));
         }
 
-        var (first, second) = Gather(c0, c1, c2, c3);
-        var (third, fourth) = Gather(d0, d1, d2, d3);
-        return (first, second, third, fourth);
+        for (; i < (nuint)count; i += BatchWords, firstIndex += 8)
+        {
+            var (first, second) = Batch(firstIndex, highHalf, key);
+            first.StoreUnsafe(ref target, i);
+            second.StoreUnsafe(ref target, i + 8);
+        }
     }
 
-    /// <summary>Length of <see cref="ScheduleKeys"/>' target.</summary>
-    internal const int RoundKeys = 2 * Rounds;
+    // The indices share their upper 32 bits. Words 1, 2 and 3 are then the same for all counters: the parts of the first two rounds that depend on
+    // them alone are numbers and not vectors.
+    [MethodImpl(MethodImplOptions.AggressiveInlining)]
+    private static void FourBatches(ulong firstIndex, ulong highHalf, ref ulong keys, ref ulong target)
+    {
+        var product = (ulong)MultiplierB * (uint)highHalf;
+        var word0 = (uint)(product >> 32) ^ (uint)(firstIndex >> 32) ^ (uint)keys;
+        var secondProduct = (ulong)MultiplierA * word0;
+        var mixA = Vector512.Create((highHalf >> 32) ^ Unsafe.Add(ref keys, 1));
+        var mixB = Vector512.Create((ulong)(uint)product ^ Unsafe.Add(ref keys, 2));
+        var mixC = Vector512.Create((secondProduct >> 32) ^ Unsafe.Add(ref keys, 3));
+        var multiplierA = Vector512.Create((ulong)MultiplierA);
+        var multiplierB = Vector512.Create((ulong)MultiplierB);
+        var lanes = Vector512.Create(firstIndex) + Vector512.Create(0UL, 1, 2, 3, 4, 5, 6, 7);
 
-    /// <summary>Writes the keys of all rounds, two a round, for loops that use the same key many times.</summary>
-    internal static void ScheduleKeys(ulong key, Span<ulong> roundKeys)
+        // Round 1: word 0 → word0, word 1 → low(product), word 2 → hi(a) ^ mixA, word 3 → a.
+        var c3 = LowProduct(lanes, multiplierA);
+        var d3 = LowProduct(lanes + Vector512.Create(8UL), multiplierA);
+        var e3 = LowProduct(lanes + Vector512.Create(16UL), multiplierA);
+        var f3 = LowProduct(lanes + Vector512.Create(24UL), multiplierA);
+        var c2 = Vector512.ShiftRightLogical(c3, 32) ^ mixA;
+        var d2 = Vector512.ShiftRightLogical(d3, 32) ^ mixA;
+        var e2 = Vector512.ShiftRightLogical(e3, 32) ^ mixA;
+        var f2 = Vector512.ShiftRightLogical(f3, 32) ^ mixA;
+
+        // Round 2: word 0 → hi(b) ^ mixB, word 1 → b, word 2 → word 3 ^ mixC, word 3 → low(secondProduct).
+        var c1 = LowProduct(c2, multiplierB);
+        var d1 = LowProduct(d2, multiplierB);
+        var e1 = LowProduct(e2, multiplierB);
+        var f1 = LowProduct(f2, multiplierB);
+        var c0 = Vector512.ShiftRightLogical(c1, 32) ^ mixB;
+        var d0 = Vector512.ShiftRightLogical(d1, 32) ^ mixB;
+        var e0 = Vector512.ShiftRightLogical(e1, 32) ^ mixB;
+        var f0 = Vector512.ShiftRightLogical(f1, 32) ^ mixB;
+        c2 = c3 ^ mixC;
+        d2 = d3 ^ mixC;
+        e2 = e3 ^ mixC;
+        f2 = f3 ^ mixC;
+        c3 = d3 = e3 = f3 = Vector512.Create(secondProduct);
+
+        for (nuint round = 4; round < 2 * Rounds; round += 2)
+        {
+            var key0 = Vector512.Create(Unsafe.Add(ref keys, round));
+            var key1 = Vector512.Create(Unsafe.Add(ref keys, round + 1));
+            var ca = LowProduct(c0, multiplierA);
+            var da = LowProduct(d0, multiplierA);
+            var ea = LowProduct(e0, multiplierA);
+            var fa = LowProduct(f0, multiplierA);
+            var cb = LowProduct(c2, multiplierB);
+            var db = LowProduct(d2, multiplierB);
+            var eb = LowProduct(e2, multiplierB);
+            var fb = LowProduct(f2, multiplierB);
+            c0 = Vector512.ShiftRightLogical(cb, 32) ^ c1 ^ key0;
+            d0 = Vector512.ShiftRightLogical(db, 32) ^ d1 ^ key0;
+            e0 = Vector512.ShiftRightLogical(eb, 32) ^ e1 ^ key0;
+            f0 = Vector512.ShiftRightLogical(fb, 32) ^ f1 ^ key0;
+            c2 = Vector512.ShiftRightLogical(ca, 32) ^ c3 ^ key1;
+            d2 = Vector512.ShiftRightLogical(da, 32) ^ d3 ^ key1;
+            e2 = Vector512.ShiftRightLogical(ea, 32) ^ e3 ^ key1;
+            f2 = Vector512.ShiftRightLogical(fa, 32) ^ f3 ^ key1;
+            (c1, d1, e1, f1) = (cb, db, eb, fb);
+            (c3, d3, e3, f3) = (ca, da, ea, fa);
+        }
+
+        Store(c0, c1, c2, c3, ref target, 0);
+        Store(d0, d1, d2, d3, ref target, BatchWords);
+        Store(e0, e1, e2, e3, ref target, 2 * BatchWords);
+        Store(f0, f1, f2, f3, ref target, 3 * BatchWords);
+    }
+
+    [MethodImpl(MethodImplOptions.AggressiveInlining)]
+    private static void Store(
+        Vector512<ulong> c0, Vector512<ulong> c1, Vector512<ulong> c2, Vector512<ulong> c3, ref ulong target, nuint offset)
+    {
+        var (first, second) = Gather(c0, c1, c2, c3);
+        first.StoreUnsafe(ref target, offset);
+        second.StoreUnsafe(ref target, offset + 8);
+    }
+
+    // The keys of all rounds, two a round.
+    private static void ScheduleKeys(ulong key, Span<ulong> roundKeys)
     {
         var key0 = (uint)key;
         var key1 = (uint)(key >> 32);
-        for (var round = 0; round < RoundKeys; round += 2)
+        for (var round = 0; round < 2 * Rounds; round += 2)
         {
             roundKeys[round] = key0;
             roundKeys[round + 1] = key1;

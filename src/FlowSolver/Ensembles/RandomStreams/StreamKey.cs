@@ -1,4 +1,4 @@
-using System.Runtime.Intrinsics;
+using System.Runtime.InteropServices;
 
 namespace FlowSolver.Ensembles.RandomStreams;
 
@@ -23,12 +23,19 @@ public readonly record struct StreamKey(ulong Seed, uint Purpose, uint Step = 0)
         Span<ulong> batch = stackalloc ulong[Philox.BatchWords];
         while (destination.Length > 0)
         {
-            var (first, second) = Philox.Batch(offset / Philox.BatchWords * 8, HighHalf, Seed);
-            Vector512.CopyTo(first, batch);
-            Vector512.CopyTo(second, batch[8..]);
             var skipped = (int)(offset % Philox.BatchWords);
-            var count = Math.Min(destination.Length, Philox.BatchWords - skipped);
-            batch.Slice(skipped, count).CopyTo(destination);
+            var count = destination.Length - destination.Length % Philox.BatchWords;
+            if (skipped == 0 && count > 0)
+            {
+                Philox.Fill(offset / 2, HighHalf, Seed, ref MemoryMarshal.GetReference(destination), count);
+            }
+            else
+            {
+                Philox.Fill((offset - (ulong)skipped) / 2, HighHalf, Seed, ref MemoryMarshal.GetReference(batch), Philox.BatchWords);
+                count = Math.Min(destination.Length, Philox.BatchWords - skipped);
+                batch.Slice(skipped, count).CopyTo(destination);
+            }
+
             destination = destination[count..];
             offset += (ulong)count;
         }
