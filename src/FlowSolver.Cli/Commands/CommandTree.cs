@@ -15,6 +15,7 @@ internal static class CommandTree
         {
             RunCommand.Create(host),
             CheckCommand.Create(host),
+            AuditCommand.Create(host),
             ConvergeCommand.Create(host),
             GatherCommand.Create(host),
             NewCommand.Create(host),
