@@ -30,7 +30,7 @@ public static class SamplesReader
             if (Directory.Exists(path))
                 throw Fault(path, "The file of samples was a directory; it must be a CSV, .npy or HDF5 file.");
             if (!File.Exists(path))
-                throw Fault(path, "The file of samples does not exist.", "Give its name relative to the case file, or from the root.");
+                throw Fault(path, "The file of samples does not exist.", "Check the name; a case file names its start samples relative to itself.");
             var set = Dispatch(path, dimension);
             if (set.Count < leastRows)
             {

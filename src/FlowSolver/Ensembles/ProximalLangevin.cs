@@ -13,10 +13,10 @@ namespace FlowSolver.Ensembles;
 public sealed class ProximalLangevin : RecipeSampler
 {
     /// <inheritdoc/>
-    public override SplitRecipe Recipe { get; } = new(SplitPart.Transport(TransportMap.Proximal), SplitPart.Noise());
+    public override SplitRecipe Recipe { get; } = SplitRecipes.ProximalThenNoise;
 
     /// <inheritdoc/>
     public override SamplerTraits Traits { get; } = new(
-        "proximal-ula", "Proximal Langevin: implicit gradient step, then noise.", null, 1,
+        "proximal-ula", "Proximal Langevin: implicit gradient step, then noise.", SplittingScheme.Proximal, 1,
         "A. Durmus, S. Majewski, B. Miasojedow, J. Mach. Learn. Res. 20 (73) (2019) 1-46");
 }

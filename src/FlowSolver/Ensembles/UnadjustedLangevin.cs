@@ -13,10 +13,10 @@ namespace FlowSolver.Ensembles;
 public sealed class UnadjustedLangevin : RecipeSampler
 {
     /// <inheritdoc/>
-    public override SplitRecipe Recipe { get; } = new(SplitPart.Transport(TransportMap.Gradient), SplitPart.Noise());
+    public override SplitRecipe Recipe { get; } = SplitRecipes.GradientThenNoise;
 
     /// <inheritdoc/>
     public override SamplerTraits Traits { get; } = new(
-        "ula", "Unadjusted Langevin: explicit gradient step, then noise.", null, 1,
+        "ula", "Unadjusted Langevin: explicit gradient step, then noise.", SplittingScheme.Gradient, 1,
         "A. Durmus, É. Moulines, Bernoulli 25 (2019) 2854-2882");
 }
