@@ -73,9 +73,9 @@ public static partial class PlaneTransport
 /// Sobolev norm with the density as weight.
 /// </summary>
 /// <remarks>
-/// L² = ∫ w|∇p|² with −∇·(w∇p) = counts/(N·cell) − ρ and w = max(ρ, 1/(N·cell)): W2 to first order in the defect (R. Peyre, <i>Comparison between W2 distance and Ḣ⁻¹
-/// norm</i>, ESAIM: COCV 24 (2018) 1489-1501). The floor of one sample a cell keeps a stray sample in a tail, where ρ is nearly 0, at the cost of moving it to its
-/// neighbours. As a test statistic it is calibrated by simulation, so its p-value does not rest on the linearisation. Owns its memory; allocates nothing in <see cref="OfCounts"/>.
+/// L² = ∫ w|∇p|² with −∇·(w∇p) = counts/(N·cell) − ρ and w = max(ρ, 1/(N·S²)), S the density's spread: W2 to first order in the defect (R. Peyre,
+/// <i>Comparison between W2 distance and Ḣ⁻¹ norm</i>, ESAIM: COCV 24 (2018) 1489-1501). The floor, one sample on the area of the density, keeps a stray sample in a tail,
+/// where ρ is nearly 0, at the price of a move by about S: S/√N. As a test statistic it is calibrated by simulation, so its p-value does not rest on the linearisation. Owns its memory; allocates nothing in <see cref="OfCounts"/>.
 /// </remarks>
 public sealed class PlaneSampleDistance
 {
@@ -100,6 +100,8 @@ public sealed class PlaneSampleDistance
         this.team = team;
         var grid = density.Grid;
         sampleDensity = 1 / (Require.AtLeast(sampleCount, 1) * grid.CellVolume);
+        Spread = SpreadOf(density);
+        var floor = 1 / (sampleCount * Math.Max(Spread * Spread, grid.CellVolume));
         elliptic = new PlaneElliptic(grid.Nx, grid.Ny, grid.X.IsPeriodic, grid.Y!.IsPeriodic, grid.X.Width, grid.Y.Width, team);
         right = new double[grid.CellCount];
         potential = new double[grid.CellCount];
@@ -112,14 +114,13 @@ public sealed class PlaneSampleDistance
             var faceY = elliptic.RowY(row);
             for (var i = 0; i < here.Length; i++)
             {
-                var weight = Math.Max(here[i], sampleDensity);
-                faceX[i] = scaleX * (weight + Math.Max(here[(i + 1) % here.Length], sampleDensity));
-                faceY[i] = scaleY * (weight + Math.Max(up[i], sampleDensity));
+                var weight = Math.Max(here[i], floor);
+                faceX[i] = scaleX * (weight + Math.Max(here[(i + 1) % here.Length], floor));
+                faceY[i] = scaleY * (weight + Math.Max(up[i], floor));
             }
         }
 
         elliptic.Prepare();
-        Spread = SpreadOf(density);
     }
 
     /// <summary>√(variance of x + variance of y) of the density, in units of length.</summary>
@@ -145,7 +146,14 @@ public sealed class PlaneSampleDistance
         var found = new int[grid.CellCount];
         var best = 0.0;
         var scaled = new double[grid.CellCount];
-        // A dual value for the samples' potential at a few sizes: sampling noise on the scale of a cell asks for less than the full one.
+        var scatter = new PlaneScatter(grid, team);
+        var rounding = new PlaneRounding(grid);
+        var (from, to, arrived) = (new double[grid.CellCount], new double[grid.CellCount], new double[grid.CellCount]);
+        var (momentX, momentY) = (new double[grid.CellCount], new double[grid.CellCount]);
+        for (var i = 0; i < from.Length; i++)
+            (from[i], to[i]) = (samples[i] * grid.CellVolume, density.Values[i] * grid.CellVolume);
+        var cost = rounding.Settle(from, null, null, to);
+        // The potential at a few sizes: sampling noise on the scale of a cell asks for less than the full one. Each size gives a dual value and a plan.
         foreach (var size in (ReadOnlySpan<double>)[1, 0.6, 0.3])
         {
             for (var i = 0; i < scaled.Length; i++)
@@ -154,16 +162,16 @@ public sealed class PlaneSampleDistance
             double sum = 0, rest = 0;
             for (var i = 0; i < scaled.Length; i++)
             {
-                sum += (samples[i] - density.Values[i]) * scaled[i];
-                rest += samples[i] * (f[i] - scaled[i]);
+                sum += (from[i] - to[i]) * scaled[i];
+                rest += from[i] * (f[i] - scaled[i]);
             }
 
-            best = Math.Max(best, (sum + rest) * grid.CellVolume);
+            best = Math.Max(best, sum + rest);
+            var plan = scatter.PushPlan(from, dx, dy, arrived, momentX, momentY);
+            cost = Math.Min(cost, plan + rounding.Settle(arrived, momentX, momentY, to));
         }
 
-        for (var i = 0; i < scaled.Length; i++)
-            (f[i], dx[i]) = (samples[i] * grid.CellVolume, density.Values[i] * grid.CellVolume);
-        return (Math.Sqrt(2 * best), Math.Sqrt(Math.Max(0, new PlaneRounding(grid).Settle(f, null, null, dx))));
+        return (Math.Sqrt(2 * best), Math.Sqrt(Math.Max(0, cost)));
     }
 
     private static double SpreadOf(Density density)
