@@ -95,6 +95,12 @@ public sealed class PaddedPlane
             }
         }
 
+        FillGhostRows(field);
+    }
+
+    /// <summary>Fills the ghost rows alone, from rows whose own ghosts have been filled.</summary>
+    public void FillGhostRows(Span<double> field)
+    {
         for (var g = 1; g <= Ghosts; g++)
         {
             CopyRow(field, WrapsY ? Ny - g : g - 1, -g);

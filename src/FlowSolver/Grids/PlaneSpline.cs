@@ -29,7 +29,10 @@ public sealed class PlaneSpline
     private readonly double inverseWidthY;
     private readonly Action<int> alongX;
     private readonly Action<int> alongY;
+    private readonly double[] freeFactorsX;
+    private readonly double[] freeFactorsY;
     private double[] field = [];
+    private bool free;
 
     /// <summary>Takes memory for one spline.</summary>
     /// <param name="grid">A grid in two dimensions.</param>
@@ -46,6 +49,8 @@ public sealed class PlaneSpline
         coefficients = plane.NewField();
         (factorsX, closingX) = Factors(plane.Nx, plane.WrapsX);
         (factorsY, closingY) = Factors(plane.Ny, plane.WrapsY);
+        freeFactorsX = FreeFactors(plane.Nx);
+        freeFactorsY = FreeFactors(plane.Ny);
         fromX = grid.X.Interval.From + 0.5 * grid.X.Width;
         fromY = grid.Y!.Interval.From + 0.5 * grid.Y.Width;
         inverseWidthX = 1 / grid.X.Width;
@@ -55,14 +60,53 @@ public sealed class PlaneSpline
     }
 
     /// <summary>Fits the spline to a field on the plane; ghosts of the field are not read.</summary>
-    public void Fit(double[] field)
+    /// <param name="field">The values at the nodes.</param>
+    /// <param name="freeAtWalls">
+    /// Whether the field may have a slope at a wall, where it is then continued by the parabola through its last values (exact for quadratic fields)
+    /// instead of being even.
+    /// </param>
+    public void Fit(double[] field, bool freeAtWalls = false)
     {
         ArgumentNullException.ThrowIfNull(field);
         Require.Length(field.Length, plane.Length);
         this.field = field;
+        free = freeAtWalls;
         team.Run((plane.Ny + RowsPerBlock - 1) / RowsPerBlock, alongX);
         team.Run((plane.Nx + StripWidth - 1) / StripWidth, alongY);
         plane.FillGhosts(coefficients);
+        if (free)
+            ContinueFreely();
+    }
+
+    // Ghost coefficients of the parabola through the last three.
+    private void ContinueFreely()
+    {
+        if (!plane.WrapsX)
+        {
+            for (var j = 0; j < plane.Ny; j++)
+            {
+                var row = coefficients.AsSpan(plane.Row(j) - PaddedPlane.Ghosts, plane.Nx + 2 * PaddedPlane.Ghosts);
+                var n = row.Length;
+                (row[1], row[0]) = Continued(row[2], row[3], row[4]);
+                (row[n - 2], row[n - 1]) = Continued(row[n - 3], row[n - 4], row[n - 5]);
+            }
+        }
+
+        if (plane.WrapsY)
+        {
+            plane.FillGhostRows(coefficients);
+            return;
+        }
+
+        for (var i = -PaddedPlane.Ghosts; i < plane.Nx + PaddedPlane.Ghosts; i++)
+        {
+            var (first, last) = (plane.Row(0) + i, plane.Row(plane.Ny - 1) + i);
+            var s = plane.Stride;
+            (coefficients[first - s], coefficients[first - 2 * s]) = Continued(coefficients[first], coefficients[first + s], coefficients[first + 2 * s]);
+            (coefficients[last + s], coefficients[last + 2 * s]) = Continued(coefficients[last], coefficients[last - s], coefficients[last - 2 * s]);
+        }
+
+        static (double Near, double Far) Continued(double a, double b, double c) => (3 * (a - b) + c, 6 * a - 8 * b + 3 * c);
     }
 
     /// <summary>Value and gradient at points; all spans of one length.</summary>
@@ -172,11 +216,56 @@ public sealed class PlaneSpline
         return (factors, closing);
     }
 
+    // The first and last rows become (1, −1): no third difference at the ends, combined with the row beside.
+    private static double[] FreeFactors(int n)
+    {
+        var factors = new double[n];
+        factors[0] = 1;
+        factors[1] = 1.0 / 5;
+        for (var i = 2; i < n - 1; i++)
+            factors[i] = 1 / (4 - factors[i - 1]);
+        factors[n - 1] = 1 / (1 + factors[n - 2]);
+        return factors;
+    }
+
+    // A line with free ends, in place: c₀ − c₁ = s₀ − s₁, then (1, 4, 1) c = 6 s, then cₙ − cₙ₋₁ = sₙ − sₙ₋₁.
+    private void FitFreely(int start, int stride, int n, double[] factors)
+    {
+        var last = start + (n - 1) * stride;
+        var end = coefficients[last] - coefficients[last - stride];
+        var previous = coefficients[start] - coefficients[start + stride];
+        coefficients[start] = previous;
+        for (var i = 1; i < n - 1; i++)
+        {
+            previous = (6 * coefficients[start + i * stride] - previous) * factors[i];
+            coefficients[start + i * stride] = previous;
+        }
+
+        previous = (end + previous) * factors[n - 1];
+        coefficients[last] = previous;
+        for (var i = n - 2; i >= 0; i--)
+        {
+            previous = coefficients[start + i * stride] + (i == 0 ? previous : -factors[i] * previous);
+            coefficients[start + i * stride] = previous;
+        }
+    }
+
     private void FitRows(int block)
     {
         var n = plane.Nx;
         var first = block * RowsPerBlock;
         var rows = Math.Min(RowsPerBlock, plane.Ny - first);
+        if (free && !plane.WrapsX)
+        {
+            for (var j = first; j < first + rows; j++)
+            {
+                field.AsSpan(plane.Row(j), n).CopyTo(coefficients.AsSpan(plane.Row(j), n));
+                FitFreely(plane.Row(j), 1, n, freeFactorsX);
+            }
+
+            return;
+        }
+
         // Four rows side by side: the recurrence of one row alone would wait for itself.
         for (var k = 0; k < rows; k += 4)
         {
@@ -230,6 +319,13 @@ public sealed class PlaneSpline
         var from = strip * StripWidth;
         var width = Math.Min(StripWidth, plane.Nx - from);
         var n = plane.Ny;
+        if (free && !plane.WrapsY)
+        {
+            for (var i = from; i < from + width; i++)
+                FitFreely(plane.Row(0) + i, plane.Stride, n, freeFactorsY);
+            return;
+        }
+
         for (var j = 0; j < n; j++)
         {
             var row = coefficients.AsSpan(plane.Row(j) + from, width);

@@ -8,7 +8,7 @@ public sealed class JkoScheme : FlowScheme
 {
     /// <summary>Creates the scheme.</summary>
     /// <param name="dualGapTolerance">In two dimensions, the largest duality gap of a step relative to W2²/(2τ) that passes; above 0.</param>
-    public JkoScheme(double dualGapTolerance = 1e-4) => DualGapTolerance = Require.Positive(dualGapTolerance);
+    public JkoScheme(double dualGapTolerance = 1e-2) => DualGapTolerance = Require.Positive(dualGapTolerance);
 
     /// <summary>The largest relative duality gap that passes.</summary>
     public double DualGapTolerance { get; }

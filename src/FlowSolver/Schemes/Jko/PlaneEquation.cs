@@ -276,6 +276,11 @@ internal sealed class PlaneEquation
                 diffusionX[i] *= share;
                 diffusionY[i] *= share;
                 mixed[i] *= share;
+                if (!Bare)
+                    continue;
+                // The stand-in must not oscillate where ρₙ falls by more than e² from cell to cell.
+                diffusionX[i] = Math.Max(diffusionX[i], Math.Abs(driftX[i]));
+                diffusionY[i] = Math.Max(diffusionY[i], Math.Abs(driftY[i]));
             }
         }
 

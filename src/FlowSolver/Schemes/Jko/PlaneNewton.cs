@@ -19,6 +19,7 @@ internal sealed class PlaneNewton
     private readonly Gmres krylov;
     private readonly double[] correction;
     private readonly double[] right;
+    private readonly double[] best;
     private readonly Action<double[], double[]> apply;
     private readonly Action<double[], double[]> precondition;
 
@@ -29,6 +30,7 @@ internal sealed class PlaneNewton
         krylov = new Gmres(Equation.Plane.Length, Restart, team);
         correction = Equation.Plane.NewField();
         right = Equation.Plane.NewField();
+        best = Equation.Plane.NewField();
         apply = Equation.ApplyDerivative;
         precondition = preconditioner.Apply;
     }
@@ -100,13 +102,24 @@ internal sealed class PlaneNewton
     {
         var products = 0;
         var residual = Equation.Evaluate(phi, true);
-        for (var k = 0; ; k++)
+        var least = residual;
+        Array.Copy(phi, best, phi.Length);
+        var k = 0;
+        var refused = 0;
+        for (; ; k++)
         {
             Trace?.Invoke($"  newton {k}: L1 {residual.Weighted:g4} L2 {Math.Sqrt(residual.Square):g4} mass {residual.Mass:g8} folded {residual.Folded}");
+            if (Trace is not null) Worst(phi);
+            if (residual.Weighted < least.Weighted)
+            {
+                least = residual;
+                Array.Copy(phi, best, phi.Length);
+            }
+
             if (residual.Weighted <= tolerance)
                 return new PlaneSolve(true, k, products, residual);
-            if (k == most || !double.IsFinite(residual.Weighted))
-                return new PlaneSolve(false, k, products, residual);
+            if (k == most || !double.IsFinite(residual.Weighted) || refused > (patient ? 3 : 0) || residual.Weighted > 1e3 * least.Weighted)
+                break;
             products += SolveLinear(0.01, 1e-8);
             var before = residual.Weighted;
             var taken = 1.0;
@@ -117,12 +130,59 @@ internal sealed class PlaneNewton
                 Move(phi, 0.5 * taken);
                 taken *= 0.5;
                 residual = Equation.Evaluate(phi, true);
-                Trace?.Invoke($"    backtrack {taken}: {residual.Weighted}");
             }
 
-            if (taken < 1 && k > 1 && !patient)
-                return new PlaneSolve(false, k, products, residual);
+            if (taken < 1 && k > 1)
+                refused++;
         }
+
+        Array.Copy(best, phi, phi.Length);
+        return new PlaneSolve(false, k, products, least);
+    }
+
+    /// <summary>
+    /// Leaves the equation out in cells where it is far from holding at the stand-in, and in their neighbours: there the map jumps within a cell and
+    /// no value at the centre speaks for it.
+    /// </summary>
+    /// <param name="most">Largest |log ρ′ − log ρ| that counts as near.</param>
+    public void DistrustUnresolved(double most)
+    {
+        var plane = Equation.Plane;
+        Equation.Evaluate(Equation.Linear, false);
+        Array.Copy(Equation.Residual, right, right.Length);
+        plane.FillGhosts(right);
+        var bound = most * Equation.Temperature;
+        var count = 0;
+        for (var j = 0; j < plane.Ny; j++)
+        {
+            var row = plane.Row(j);
+            for (var i = row; i < row + plane.Nx; i++)
+            {
+                var near = true;
+                for (var k = -1; k <= 1; k++)
+                {
+                    for (var l = -1; l <= 1; l++)
+                        near &= Math.Abs(right[i + k * plane.Stride + l]) <= bound;
+                }
+
+                if (near)
+                    continue;
+                count++;
+                Equation.Trust[i] = 0;
+            }
+        }
+
+        Trace?.Invoke($"   distrusted {count} cells");
+    }
+
+    private void Worst(double[] phi)
+    {
+        var e = Equation; var best = 0.0; int bi = 0, bj = 0;
+        for (var j = 0; j < e.Grid.Ny; j++) for (var i = 0; i < e.Grid.Nx; i++) { var k = e.Plane.Row(j) + i; var v = e.Weights[k] * e.Residual[k] * e.Residual[k]; if (v > best) (best, bi, bj) = (v, i, j); }
+        var at = e.Plane.Row(bj) + bi; var s = e.Plane.Stride; var hx = e.Grid.X.Width; var hy = e.Grid.Y!.Width; var tau = e.Step;
+        double gx = (phi[at + 1] - phi[at - 1]) / (2 * hx), gy = (phi[at + s] - phi[at - s]) / (2 * hy);
+        double xx = 1 + tau * (phi[at + 1] - 2 * phi[at] + phi[at - 1]) / (hx * hx), yy = 1 + tau * (phi[at + s] - 2 * phi[at] + phi[at - s]) / (hy * hy), xy = tau * (phi[at + s + 1] - phi[at + s - 1] - phi[at - s + 1] + phi[at - s - 1]) / (4 * hx * hy);
+        Trace!(FormattableString.Invariant($"     worst at ({e.Grid.X.Center(bi):f3},{e.Grid.Y.Center(bj):f3}) cell {bi},{bj} rho {e.Weights[at]:g3} G {e.Residual[at] / e.Temperature:g4} trust {e.Trust[at]:g3} Y ({e.Grid.X.Center(bi) + tau * gx:f3},{e.Grid.Y.Center(bj) + tau * gy:f3}) A {xx:f3} {xy:f3} {yy:f3} phi {phi[at]:g4} standin {e.Linear[at]:g4} share {best / e.Temperature / e.Temperature * e.Grid.CellVolume:g3} drift {e.DriftX[at]:g3} {e.DriftY[at]:g3} diff {e.DiffusionX[at]:g3} {e.DiffusionY[at]:g3}"));
     }
 
     private int SolveLinear(double forcing, double weightFloor)
