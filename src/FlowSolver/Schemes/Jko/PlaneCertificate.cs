@@ -90,8 +90,6 @@ internal sealed class PlaneCertificate
         moveY = equation.Plane.NewField();
     }
 
-    internal Action<string>? Trace { get; set; }
-
     /// <summary>Certifies φ as the solution of the equation's step.</summary>
     /// <param name="phi">φ, normalised so that e^((φ−V)/T) has mass 1.</param>
     /// <param name="old">φₙ, likewise.</param>
@@ -151,7 +149,6 @@ internal sealed class PlaneCertificate
         for (var b = 0; b < blocks; b++)
             pushed += sums[5 * b];
         var other = pushed * volume / oldMass + equation.Temperature * Math.Log(newMass / oldMass);
-        Trace?.Invoke($"    gaps {gap / transport:g4} and {other / transport:g4} masses {oldMass:g10} {newMass:g10} {mass:g10} entropy {entropy:g4} cost {cost:g4}");
         return Math.Abs(other) < Math.Abs(gap) ? proof with { Gap = other } : proof;
     }
 

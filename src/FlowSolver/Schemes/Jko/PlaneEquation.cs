@@ -28,6 +28,11 @@ internal sealed class PlaneEquation
 {
     /// <summary>Least eigenvalue of I + τD²φ that enters the logarithm itself.</summary>
     private const double LeastStretch = 1e-3;
+
+    // log ρ between which the bound rises to a share of what the eigenvalues are where the mass is.
+    private const double TailFrom = -12;
+    private const double TailTo = -22;
+    private const double TailShare = 0.5;
     private const int RowsPerBlock = 8;
     private const int RowBuffers = 9;
     private readonly Potential potential;
@@ -115,6 +120,8 @@ internal sealed class PlaneEquation
 
     /// <summary>A representative diffusion of the linearised operator: its mean weighted by the density.</summary>
     public double TypicalDiffusion { get; private set; }
+
+    private double TailStretch { get; set; } = TailShare;
 
     private int BufferLength { get; }
 
@@ -320,15 +327,9 @@ internal sealed class PlaneEquation
     // The bound rises from LeastStretch where there is mass to TailStretch where there is none.
     private double StretchBound(double logDensity)
     {
-        var depth = (LogScale - logDensity - TailFrom) / (TailTo - TailFrom);
+        var depth = (TailFrom - logDensity) / (TailFrom - TailTo);
         return LeastStretch * Math.Pow(TailStretch / LeastStretch, Math.Clamp(depth, 0, 1));
     }
-
-    internal double LogScale { get; set; }
-    internal static double TailShare = 0.5;
-    private double TailStretch { get; set; } = 0.5;
-    internal static double TailFrom = 12;
-    internal static double TailTo = 22;
 
     private static void MoveInside(Axis axis, Span<double> positions)
     {

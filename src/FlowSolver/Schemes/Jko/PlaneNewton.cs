@@ -15,6 +15,13 @@ internal readonly record struct PlaneSolve(bool Converged, int Newton, int Produ
 internal sealed class PlaneNewton
 {
     private const int Restart = 14;
+    private const int MostProducts = 28;
+
+    // Share of the largest density below which a cell belongs to the tails, where the step may be patched and smoothed.
+    private const double TailShare = 1e-4;
+
+    // Second difference of φ/T from cell to cell beyond which tails are smoothed.
+    private const double LargestBend = 2;
     private readonly AlternatingDirections preconditioner;
     private readonly Gmres krylov;
     private readonly double[] correction;
@@ -109,7 +116,6 @@ internal sealed class PlaneNewton
         for (; ; k++)
         {
             Trace?.Invoke($"  newton {k}: L1 {residual.Weighted:g4} L2 {Math.Sqrt(residual.Square):g4} mass {residual.Mass:g8} folded {residual.Folded}");
-            if (Trace is not null) Worst(phi);
             if (residual.Weighted < least.Weighted)
             {
                 least = residual;
@@ -145,14 +151,17 @@ internal sealed class PlaneNewton
     /// no value at the centre speaks for it.
     /// </summary>
     /// <param name="most">Largest |log ρ′ − log ρ| that counts as near.</param>
-    public void DistrustUnresolved(double most)
+    /// <param name="densityShare">Cells above this share of the largest density of the stand-in are trusted all the same.</param>
+    public void DistrustUnresolved(double most, double densityShare)
     {
         var plane = Equation.Plane;
+        var highest = Highest(Equation.Linear);
+
+        var top = highest + Equation.Temperature * Math.Log(densityShare);
         Equation.Evaluate(Equation.Linear, false);
         Array.Copy(Equation.Residual, right, right.Length);
         plane.FillGhosts(right);
         var bound = most * Equation.Temperature;
-        var count = 0;
         for (var j = 0; j < plane.Ny; j++)
         {
             var row = plane.Row(j);
@@ -165,38 +174,85 @@ internal sealed class PlaneNewton
                         near &= Math.Abs(right[i + k * plane.Stride + l]) <= bound;
                 }
 
-                if (near)
+                if (near || Equation.Linear[i] - Equation.CellPotential[i] > top)
                     continue;
-                count++;
                 Equation.Trust[i] = 0;
             }
         }
 
-        Trace?.Invoke($"   distrusted {count} cells");
     }
 
-    private void Worst(double[] phi)
+    /// <summary>Puts the stand-in where the equation was left unsolved and neither density holds a noticeable share of the mass.</summary>
+    public void PatchUnsolved(double[] phi)
     {
-        var e = Equation; var best = 0.0; int bi = 0, bj = 0;
-        for (var j = 0; j < e.Grid.Ny; j++) for (var i = 0; i < e.Grid.Nx; i++) { var k = e.Plane.Row(j) + i; var v = e.Weights[k] * e.Residual[k] * e.Residual[k]; if (v > best) (best, bi, bj) = (v, i, j); }
-        var at = e.Plane.Row(bj) + bi; var s = e.Plane.Stride; var hx = e.Grid.X.Width; var hy = e.Grid.Y!.Width; var tau = e.Step;
-        double gx = (phi[at + 1] - phi[at - 1]) / (2 * hx), gy = (phi[at + s] - phi[at - s]) / (2 * hy);
-        double xx = 1 + tau * (phi[at + 1] - 2 * phi[at] + phi[at - 1]) / (hx * hx), yy = 1 + tau * (phi[at + s] - 2 * phi[at] + phi[at - s]) / (hy * hy), xy = tau * (phi[at + s + 1] - phi[at + s - 1] - phi[at - s + 1] + phi[at - s - 1]) / (4 * hx * hy);
-        Trace!(FormattableString.Invariant($"     worst at ({e.Grid.X.Center(bi):f3},{e.Grid.Y.Center(bj):f3}) cell {bi},{bj} rho {e.Weights[at]:g3} G {e.Residual[at] / e.Temperature:g4} trust {e.Trust[at]:g3} Y ({e.Grid.X.Center(bi) + tau * gx:f3},{e.Grid.Y.Center(bj) + tau * gy:f3}) A {xx:f3} {xy:f3} {yy:f3} phi {phi[at]:g4} standin {e.Linear[at]:g4} share {best / e.Temperature / e.Temperature * e.Grid.CellVolume:g3} drift {e.DriftX[at]:g3} {e.DriftY[at]:g3} diff {e.DiffusionX[at]:g3} {e.DiffusionY[at]:g3}"));
+        var plane = Equation.Plane;
+        Equation.Evaluate(phi, false);
+        var most = Highest(phi);
+
+        var low = most + Equation.Temperature * Math.Log(TailShare);
+        for (var j = 0; j < plane.Ny; j++)
+        {
+            var row = plane.Row(j);
+            for (var i = row; i < row + plane.Nx; i++)
+            {
+                if (Math.Abs(Equation.Residual[i]) <= 0.05 * Equation.Temperature
+                    || Math.Max(phi[i], Equation.Linear[i]) - Equation.CellPotential[i] > low)
+                {
+                    continue;
+                }
+
+                phi[i] = Equation.Linear[i];
+            }
+        }
+
     }
 
-    private int SolveLinear(double forcing, double weightFloor)
+    /// <summary>
+    /// Evens out φ where the density is below a share of its maximum and φ bends by more than a few T from cell to cell: there a spline through it
+    /// would ring, and no step can follow what is narrower than a cell.
+    /// </summary>
+    public void SmoothTails(double[] phi)
     {
-        preconditioner.Prepare(Equation.DiffusionX, Equation.DriftX, Equation.DiffusionY, Equation.DriftY, Equation.TypicalDiffusion);
-        FloorWeights(weightFloor);
-        Array.Copy(Equation.Residual, right, right.Length);
-        var (used, reached) = krylov.Solve(right, correction, Equation.Weights, apply, precondition, forcing, 28);
-        Trace?.Invoke($"     gmres {used} products, {reached:g3}, typical diffusion {Equation.TypicalDiffusion:g4}");
-        return used;
+        const int sweeps = 12;
+        var plane = Equation.Plane;
+        var temperature = Equation.Temperature;
+        var most = Highest(phi);
+
+        var low = most + temperature * Math.Log(TailShare);
+        var bound = LargestBend * temperature;
+        var s = plane.Stride;
+        for (var sweep = 0; sweep < sweeps; sweep++)
+        {
+            plane.FillGhosts(phi);
+            var count = 0;
+            for (var j = 0; j < plane.Ny; j++)
+            {
+                var row = plane.Row(j);
+                for (var i = row; i < row + plane.Nx; i++)
+                {
+                    var acrossX = phi[i - 1] + phi[i + 1];
+                    var acrossY = phi[i - s] + phi[i + s];
+                    var twice = 2 * phi[i];
+                    if (phi[i] - Equation.CellPotential[i] > low || (Math.Abs(acrossX - twice) <= bound && Math.Abs(acrossY - twice) <= bound))
+                    {
+                        right[i] = phi[i];
+                        continue;
+                    }
+
+                    count++;
+                    right[i] = 0.25 * twice + 0.125 * (acrossX + acrossY);
+                }
+            }
+
+            if (count == 0)
+                return;
+            for (var j = 0; j < plane.Ny; j++)
+                right.AsSpan(plane.Row(j), plane.Nx).CopyTo(phi.AsSpan(plane.Row(j)));
+        }
     }
 
-    /// <summary>Sets where the linearised step stands in: where its density is below this share of its maximum.</summary>
-    public void SetTail(double tailDensity)
+    // Largest φ − V over the cells: T times the log of the largest density.
+    private double Highest(double[] phi)
     {
         var plane = Equation.Plane;
         var most = double.NegativeInfinity;
@@ -204,8 +260,25 @@ internal sealed class PlaneNewton
         {
             var row = plane.Row(j);
             for (var i = row; i < row + plane.Nx; i++)
-                most = Math.Max(most, Equation.Linear[i] - Equation.CellPotential[i]);
+                most = Math.Max(most, phi[i] - Equation.CellPotential[i]);
         }
+
+        return most;
+    }
+
+    private int SolveLinear(double forcing, double weightFloor)
+    {
+        preconditioner.Prepare(Equation.DiffusionX, Equation.DriftX, Equation.DiffusionY, Equation.DriftY, Equation.TypicalDiffusion);
+        FloorWeights(weightFloor);
+        Array.Copy(Equation.Residual, right, right.Length);
+        return krylov.Solve(right, correction, Equation.Weights, apply, precondition, forcing, MostProducts).Products;
+    }
+
+    /// <summary>Sets where the linearised step stands in: where its density is below this share of its maximum.</summary>
+    public void SetTail(double tailDensity)
+    {
+        var plane = Equation.Plane;
+        var most = Highest(Equation.Linear);
 
         for (var j = 0; j < plane.Ny; j++)
         {

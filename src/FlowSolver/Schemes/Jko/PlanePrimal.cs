@@ -67,9 +67,6 @@ internal sealed class PlanePrimal
 
     public Grid Grid => grid;
 
-    /// <summary>Trace of the solve for diagnosis; null in use.</summary>
-    internal Action<string>? Trace { get; set; }
-
     /// <summary>Solves the step and writes θ, flat.</summary>
     /// <param name="density">ρₙ on this grid, flat, mass 1.</param>
     /// <param name="tau">τ, mobility included.</param>
@@ -106,7 +103,6 @@ internal sealed class PlanePrimal
                     break;
             }
 
-            Trace?.Invoke($"   primal {steps}: energy {energy:g9} decrement {decrement:g3} step {taken}");
             if (!(next <= energy))
                 break;
             Array.Copy(trial, theta, theta.Length);
