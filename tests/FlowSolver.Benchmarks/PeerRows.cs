@@ -9,10 +9,13 @@ internal static class PeerRows
     public static IReadOnlyList<PeerRow> Peers { get; } =
     [
         ExactFlowBenchmarks.Peer,
+        JkoPlaneBenchmarks.Middle,
+        JkoPlaneBenchmarks.Large,
     ];
 
     public static IReadOnlyList<GrowthRow> Growth { get; } =
     [
         ExactFlowBenchmarks.Growth,
+        JkoPlaneBenchmarks.Growth,
     ];
 }

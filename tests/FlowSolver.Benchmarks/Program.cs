@@ -8,6 +8,8 @@ switch (args)
         return PeerComparison.RunPeers(names);
     case ["growth", .. var names]:
         return PeerComparison.RunGrowth(names);
+    case ["hard-starts", .. var names]:
+        return HardStarts.Run(names);
     default:
         BenchmarkSwitcher.FromAssembly(typeof(Program).Assembly).Run(args);
         return 0;
