@@ -1,5 +1,5 @@
-using FlowSolver.Foundation;
 using FlowSolver.Formulas;
+using FlowSolver.Foundation;
 using FlowSolver.Grids;
 using FlowSolver.Problems;
 using FlowSolver.Schemes;

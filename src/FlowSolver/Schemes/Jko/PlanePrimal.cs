@@ -163,7 +163,12 @@ internal sealed class PlanePrimal
         Energy(theta, tau);
         potential.Jet(x, y, new PotentialJet
         {
-            Value = value, GradientX = slopeX, GradientY = slopeY, HessianXX = bendXX, HessianXY = bendXY, HessianYY = bendYY,
+            Value = value,
+            GradientX = slopeX,
+            GradientY = slopeY,
+            HessianXX = bendXX,
+            HessianXY = bendXY,
+            HessianYY = bendYY,
         });
         hessian.Clear();
         Array.Clear(gradient);
