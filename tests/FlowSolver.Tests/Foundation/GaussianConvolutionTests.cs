@@ -104,7 +104,7 @@ public class GaussianConvolutionTests
             Assert.Equal(1, found[100 + n] / (Math.Exp(-0.5 * n * n / 64.0) / Math.Sqrt(2 * Math.PI * 64)), 1e-12);
     }
 
-    /// <summary>In place, any team, and once warm without allocation. Mutation tried: strips by the number of threads, each thread adding to a shared sum.</summary>
+    /// <summary>In place, any team, and once warm without allocation. Mutation tried: one work array lent to all threads at once.</summary>
     [Fact]
     public void Apply_AnyTeam_GivesTheSameBytesAndAllocatesNothing()
     {

@@ -21,7 +21,7 @@ public class ProximalSplittingTests : SplittingConformance
     protected override FlowScheme Scheme => SplittingScheme.Proximal;
 }
 
-/// <summary>Mutation tried: strips written without clearing them first: team sizes differ in their bytes.</summary>
+/// <summary>Mutation tried: a mass whose weights reach into the next strip of rows put into its first strip alone.</summary>
 public class GradientSplittingTests : SplittingConformance
 {
     protected override FlowScheme Scheme => SplittingScheme.Gradient;

@@ -50,17 +50,18 @@ internal sealed class AxisQuadrature
             }
         }
 
+        // Windows go round a circle, and at a wall they are even like the density, or the centres would see an edge there.
+        var (from0, to0) = (axis.Interval.From, axis.Interval.To);
+        var centers = IsPeriodic
+            ? breakpoints.SelectMany(b => new[] { b, b - axis.Interval.Length, b + axis.Interval.Length })
+            : breakpoints.SelectMany(b => b == from0 || b == to0 ? [b] : new[] { b, 2 * from0 - b, 2 * to0 - b });
+        double[] windows = [.. centers];
+
         double Window(double position)
         {
             var outside = 1.0;
-            foreach (var breakpoint in breakpoints)
-            {
-                var distance = Math.Abs(position - breakpoint);
-                if (IsPeriodic)
-                    distance = Math.Min(distance, axis.Interval.Length - distance);
-                outside *= 1 - 0.5 * MathNet.Numerics.SpecialFunctions.Erfc((distance / axis.Width / fade - Deviations) / Math.Sqrt(2));
-            }
-
+            foreach (var center in windows)
+                outside *= 1 - 0.5 * MathNet.Numerics.SpecialFunctions.Erfc((Math.Abs(position - center) / axis.Width / fade - Deviations) / Math.Sqrt(2));
             return 1 - outside;
         }
 

@@ -142,12 +142,117 @@ internal sealed class PotentialSlice(Potential plane, bool alongX, double held) 
     }
 }
 
+/// <summary>
+/// A landscape beyond its domain: repeated on circles; across walls it goes on with the slope that it has there, so that what is pushed into a wall stays at it once its place is cut off
+/// at the wall.
+/// </summary>
+internal sealed class ContinuedPotential(Potential inner, Interval intervalX, Interval? intervalY) : Potential
+{
+    private const int Chunk = 256;
+
+    public override int Dimension => inner.Dimension;
+
+    public override string Description => inner.Description;
+
+    public override bool IsSmooth => inner.IsSmooth;
+
+    public override void Value(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> value)
+    {
+        Span<double> atX = stackalloc double[Chunk];
+        Span<double> atY = stackalloc double[Chunk];
+        for (var i = 0; i < x.Length; i += Chunk)
+        {
+            var part = Math.Min(Chunk, x.Length - i);
+            inner.Value(Bring(intervalX, x.Slice(i, part), atX), y.Length == 0 ? [] : Bring(intervalY!, y.Slice(i, part), atY), value.Slice(i, part));
+        }
+    }
+
+    public override void Gradient(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> gradientX, Span<double> gradientY)
+    {
+        Span<double> atX = stackalloc double[Chunk];
+        Span<double> atY = stackalloc double[Chunk];
+        for (var i = 0; i < x.Length; i += Chunk)
+        {
+            var part = Math.Min(Chunk, x.Length - i);
+            if (y.Length == 0)
+                inner.Gradient(Bring(intervalX, x.Slice(i, part), atX), [], gradientX.Slice(i, part), []);
+            else
+                inner.Gradient(Bring(intervalX, x.Slice(i, part), atX), Bring(intervalY!, y.Slice(i, part), atY), gradientX.Slice(i, part), gradientY.Slice(i, part));
+        }
+    }
+
+    public override void Jet(ReadOnlySpan<double> x, ReadOnlySpan<double> y, PotentialJet target)
+    {
+        Span<double> atX = stackalloc double[Chunk];
+        Span<double> atY = stackalloc double[Chunk];
+        for (var i = 0; i < x.Length; i += Chunk)
+        {
+            var part = Math.Min(Chunk, x.Length - i);
+            var line = y.Length == 0;
+            inner.Jet(Bring(intervalX, x.Slice(i, part), atX), line ? [] : Bring(intervalY!, y.Slice(i, part), atY), new PotentialJet
+            {
+                Value = target.Value.Slice(i, part),
+                GradientX = target.GradientX.Slice(i, part),
+                GradientY = line ? [] : target.GradientY.Slice(i, part),
+                HessianXX = target.HessianXX.Slice(i, part),
+                HessianXY = line ? [] : target.HessianXY.Slice(i, part),
+                HessianYY = line ? [] : target.HessianYY.Slice(i, part),
+            });
+        }
+    }
+
+    private static Span<double> Bring(Interval interval, ReadOnlySpan<double> positions, Span<double> places)
+    {
+        for (var i = 0; i < positions.Length; i++)
+            places[i] = interval.Ends == AxisEnds.Periodic ? interval.Fold(positions[i]) : Math.Clamp(positions[i], interval.From, interval.To);
+        return places[..positions.Length];
+    }
+}
+
 /// <summary>What the maps need to know about a landscape.</summary>
 internal static class LandscapeOnLine
 {
-    /// <summary>Kinks and jumps strictly inside an interval.</summary>
+    /// <summary>
+    /// Kinks and jumps strictly inside an interval; on a circle also the seam, where a formula that is not periodic has a kink that it does not know of.
+    /// </summary>
     public static IReadOnlyList<Kink> FindKinks(Potential potential, Interval interval)
-        => [.. potential.FindKinks(interval).Where(kink => kink.Position > interval.From && kink.Position < interval.To && (kink.SlopeBefore != kink.SlopeAfter || kink.Jump != 0))];
+    {
+        var kinks = potential.FindKinks(interval)
+            .Where(kink => kink.Position > interval.From && kink.Position < interval.To && (kink.SlopeBefore != kink.SlopeAfter || kink.Jump != 0)).ToList();
+        if (interval.Ends != AxisEnds.Periodic)
+            return kinks;
+        Span<double> slope = stackalloc double[2];
+        potential.Gradient([interval.To, interval.From], [], slope, []);
+        var step = potential.ValueAt(interval.From) - potential.ValueAt(interval.To);
+        if (Math.Abs(step) <= 1e-9 * (1 + Math.Abs(potential.ValueAt(interval.From))))
+            step = 0;
+        if (step != 0 || Math.Abs(slope[0] - slope[1]) > 1e-9 * (1 + Math.Abs(slope[0]) + Math.Abs(slope[1])))
+            kinks.Insert(0, new Kink(interval.From, slope[0], slope[1], step));
+        return kinks;
+    }
+
+    /// <summary>The same, with what a walker can meet beyond one turn of a circle, and with walls that V pushes into: nothing goes beyond them.</summary>
+    public static IReadOnlyList<Kink> FindStops(Potential potential, Interval interval)
+    {
+        var kinks = FindKinks(potential, interval);
+        if (interval.Ends == AxisEnds.Periodic)
+            return [.. Enumerable.Range(-2, 5).SelectMany(turn => kinks.Select(kink => kink with { Position = kink.Position + turn * interval.Length }))];
+        var (below, above) = WallSlopes(potential, interval);
+        var stops = new List<Kink>(kinks);
+        if (below > 0)
+            stops.Insert(0, new Kink(interval.From, double.NegativeInfinity, below, 0));
+        if (above < 0)
+            stops.Add(new Kink(interval.To, above, double.PositiveInfinity, 0));
+        return stops;
+    }
+
+    /// <summary>V′ at the two walls.</summary>
+    public static (double From, double To) WallSlopes(Potential potential, Interval interval)
+    {
+        Span<double> slope = stackalloc double[2];
+        potential.Gradient([interval.From, interval.To], [], slope, []);
+        return (slope[0], slope[1]);
+    }
 
     /// <summary>
     /// Splits V(x, y) = A(x) + B(y) where it has that form (tested at scattered points to rounding); null otherwise. The slices are V with one coordinate held, so that

@@ -13,7 +13,7 @@ namespace FlowSolver.Schemes.Splitting;
 /// ρ′(y) = ∫ρ(x) G(y − P(x)) dx, G the normal density of variance 2Ts on each axis, mirrored at walls and wrapped on circles. The integral is taken as
 /// it stands: the mass of each cell is carried to its true image and spread from there (<c>GaussianSpreading</c>), so that nothing is moved to cell centres between transport and noise
 /// and no grid diffusion adds up over short steps. Where a map has kinks (those of V, or walls that it moves) Gauss points between them replace the cell centres, and mass that lands on one
-/// point, such as the kink of |x| under prox, is spread from that point. Maps that meet across two steps are composed, noises that meet are added: both are exact.
+/// point, such as the kink of |x| under prox, is spread from that point. Walls reflect explicit maps and noise; proximal points are sought inside the walls and the flow of −∇V stops at one that V pushes into. Maps that meet across two steps are composed, noises that meet are added: both are exact.
 /// </para>
 /// <para>
 /// Order in time: one for one map and one noise; two for noise/2, flow, noise/2 and flow/2, noise, flow/2 (G. Strang, SIAM J. Numer. Anal. 5 (1968) 506-517, from memory) and for explicit/2, noise, prox/2 and

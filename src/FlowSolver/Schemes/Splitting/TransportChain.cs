@@ -102,8 +102,7 @@ internal sealed class ChainOnPlane
     public ChainOnPlane(Potential potential, Axis axisX, Axis axisY, IReadOnlyList<TransportLeg> legs)
     {
         (intervalX, intervalY) = (axisX.Interval, axisY.Interval);
-        var scale = Math.Max(intervalX.Length, intervalY.Length);
-        maps = [.. legs.Select(leg => TransportOnPlane.Create(leg.Map, potential, leg.Length, scale))];
+        maps = [.. legs.Select(leg => TransportOnPlane.Create(leg.Map, potential, leg.Length, intervalX, intervalY))];
         Examine(potential);
     }
 

@@ -139,7 +139,7 @@ internal sealed class GradientOnLine : TransportOnLine
     }
 }
 
-/// <summary>x ↦ x(t) of ẋ = −V′(x).</summary>
+/// <summary>x ↦ x(t) of ẋ = −V′(x). A valley with a kink holds whatever reaches it, and so does a wall that V pushes into.</summary>
 internal sealed class CharacteristicOnLine : TransportOnLine
 {
     private readonly Potential potential;
@@ -149,10 +149,10 @@ internal sealed class CharacteristicOnLine : TransportOnLine
 
     public CharacteristicOnLine(Potential potential, Interval interval, double length, int cells)
     {
-        this.potential = potential;
+        this.potential = interval.Ends == AxisEnds.Periodic ? new ContinuedPotential(potential, interval, null) : potential;
         this.interval = interval;
         this.length = length;
-        kinks = LandscapeOnLine.FindKinks(potential, interval);
+        kinks = LandscapeOnLine.FindStops(potential, interval);
         if (kinks.Count == 0)
             return;
         var points = new List<double>();
@@ -273,7 +273,7 @@ internal sealed class CharacteristicOnLine : TransportOnLine
 /// <remarks>
 /// The global minimiser over a fine table of y is the vertex of the lower convex hull of y²/2 + tV(y) at which the slope passes x (C. Lucet, Numer.
 /// Algorithms 16 (1997) 171-185, from memory); safeguarded Newton steps between its neighbours give the rest. Kinks of V are vertices
-/// of their own, so that everything that lands on one lands on it exactly.
+/// of their own, so that everything that lands on one lands on it exactly; so are walls, for y is sought inside them. On a circle V is repeated.
 /// </remarks>
 internal sealed class ProximalOnLine : TransportOnLine
 {
@@ -291,11 +291,10 @@ internal sealed class ProximalOnLine : TransportOnLine
 
     public ProximalOnLine(Potential potential, Interval interval, double length, int cells)
     {
-        this.potential = potential;
+        this.potential = interval.Ends == AxisEnds.Periodic ? new ContinuedPotential(potential, interval, null) : potential;
         this.length = length;
         scale = interval.Length;
-        var kinks = LandscapeOnLine.FindKinks(potential, interval);
-        var (y, value, kinkOf) = Table(interval, kinks, cells);
+        var (y, value, stopOf) = Table(potential, interval, cells);
         var hull = LowerHull(y, value);
         var count = hull.Count;
         vertex = new double[count];
@@ -311,12 +310,8 @@ internal sealed class ProximalOnLine : TransportOnLine
             lower[k] = y[Math.Max(at - 1, 0)];
             upper[k] = y[Math.Min(at + 1, y.Length - 1)];
             (slopeBelow[k], slopeAbove[k]) = (double.NaN, double.NaN);
-            if (kinkOf[at] is { } kink)
-            {
-                // Just below an upward jump the way up is barred, and so on.
-                slopeBelow[k] = kink.Jump < 0 ? double.NegativeInfinity : kink.SlopeBefore;
-                slopeAbove[k] = kink.Jump > 0 ? double.PositiveInfinity : kink.SlopeAfter;
-            }
+            if (stopOf[at] is { } stop)
+                (slopeBelow[k], slopeAbove[k]) = stop;
         }
 
         var points = new List<double>();
@@ -339,12 +334,14 @@ internal sealed class ProximalOnLine : TransportOnLine
                 jumps++;
         }
 
-        foreach (var kink in kinks)
+        for (var k = 0; k < y.Length; k++)
         {
-            if (!double.IsFinite(kink.SlopeBefore) || !double.IsFinite(kink.SlopeAfter))
+            if (stopOf[k] is not { } stop)
                 continue;
-            points.Add(kink.Position + length * kink.SlopeBefore);
-            points.Add(kink.Position + length * kink.SlopeAfter);
+            if (double.IsFinite(stop.Below))
+                points.Add(y[k] + length * stop.Below);
+            if (double.IsFinite(stop.Above))
+                points.Add(y[k] + length * stop.Above);
         }
 
         Breakpoints = Sorted(points, interval);
@@ -477,40 +474,56 @@ internal sealed class ProximalOnLine : TransportOnLine
 
     private double Depth(double y, double x) => (y - x) * (y - x) / (2 * length) + potential.ValueAt(y);
 
-    private (double[] Position, double[] Value, Kink?[] KinkOf) Table(Interval interval, IReadOnlyList<Kink> kinks, int cells)
+    // Places to search, the objective there less what does not depend on them, and for stops the slopes of V below and above.
+    private (double[] Position, double[] Value, (double Below, double Above)?[] StopOf) Table(Potential given, Interval interval, int cells)
     {
-        Span<double> slopes = stackalloc double[2];
-        potential.Gradient([interval.From, interval.To], [], slopes, []);
-        // Beyond a wall, or across the seam of a circle, only as far as the map can reach.
-        var (below, above) = (Reach(slopes[0]), Reach(-slopes[1]));
-        if (interval.Ends == AxisEnds.Periodic)
-            below = above = Math.Max(Reach(Math.Abs(slopes[0])), 0.5 * interval.Length);
-        var (low, high) = (interval.From - below, interval.To + above);
+        var periodic = interval.Ends == AxisEnds.Periodic;
+        var (low, high) = (interval.From, interval.To);
         var count = Math.Max(4 * cells, 4096) + 1;
-        var positions = new List<(double Position, Kink? Kink)>(count + 2 * kinks.Count);
-        for (var i = 0; i < count; i++)
-            positions.Add((low + (high - low) * i / (count - 1), null));
-        foreach (var kink in kinks)
+        if (periodic)
         {
-            positions.RemoveAll(place => place.Kink is null && Math.Abs(place.Position - kink.Position) < 1e-3 * (high - low) / count);
+            // Steepest slope found on the table's own spacing, and a margin for what lies between.
+            var samples = new double[count];
+            for (var i = 0; i < count; i++)
+                samples[i] = low + (high - low) * i / (count - 1);
+            var slopes = new double[count];
+            given.Gradient(samples, [], slopes, []);
+            var reach = Math.Min(1.5 * length * slopes.Where(double.IsFinite).Select(Math.Abs).DefaultIfEmpty(0).Max() + 8 * interval.Length / count, 2 * interval.Length);
+            (low, high) = (low - reach, high + reach);
+        }
+
+        var places = new List<(double Position, (double Below, double Above)? Stop)>(count + 8);
+        for (var i = 0; i < count; i++)
+            places.Add((low + (high - low) * i / (count - 1), null));
+        if (!periodic)
+        {
+            var (below, above) = LandscapeOnLine.WallSlopes(given, interval);
+            places[0] = (low, (double.NegativeInfinity, double.IsFinite(below) ? below : double.NegativeInfinity));
+            places[count - 1] = places[count - 1] with { Stop = (double.IsFinite(above) ? above : double.PositiveInfinity, double.PositiveInfinity) };
+        }
+
+        foreach (var kink in periodic ? LandscapeOnLine.FindStops(given, interval) : LandscapeOnLine.FindKinks(given, interval))
+        {
+            if (kink.Position < low || kink.Position > high)
+                continue;
+            places.RemoveAll(place => place.Stop is null && Math.Abs(place.Position - kink.Position) < 1e-3 * (high - low) / count);
             if (kink.Jump == 0)
             {
-                positions.Add((kink.Position, kink));
+                places.Add((kink.Position, (kink.SlopeBefore, kink.SlopeAfter)));
                 continue;
             }
 
-            positions.Add((Math.BitDecrement(kink.Position), kink with { SlopeAfter = kink.Jump > 0 ? double.PositiveInfinity : kink.SlopeBefore }));
-            positions.Add((Math.BitIncrement(kink.Position), kink with { SlopeBefore = kink.Jump < 0 ? double.NegativeInfinity : kink.SlopeAfter }));
+            // Just below an upward jump the way up is barred, and so on.
+            places.Add((Math.BitDecrement(kink.Position), (kink.SlopeBefore, kink.Jump > 0 ? double.PositiveInfinity : kink.SlopeBefore)));
+            places.Add((Math.BitIncrement(kink.Position), (kink.Jump < 0 ? double.NegativeInfinity : kink.SlopeAfter, kink.SlopeAfter)));
         }
 
-        positions.Sort((a, b) => a.Position.CompareTo(b.Position));
-        var y = positions.Select(place => place.Position).ToArray();
+        places.Sort((a, b) => a.Position.CompareTo(b.Position));
+        var y = places.Select(place => place.Position).ToArray();
         var value = new double[y.Length];
         potential.Value(y, [], value);
         var kept = Enumerable.Range(0, y.Length).Where(i => double.IsFinite(value[i])).ToArray();
-        return ([.. kept.Select(i => y[i])], [.. kept.Select(i => 0.5 * y[i] * y[i] + length * value[i])], [.. kept.Select(i => positions[i].Kink)]);
-
-        double Reach(double outward) => outward > 0 ? Math.Min(interval.Length, 1.5 * length * outward + 4 * interval.Length / cells) : 0;
+        return ([.. kept.Select(i => y[i])], [.. kept.Select(i => 0.5 * y[i] * y[i] + length * value[i])], [.. kept.Select(i => places[i].Stop)]);
     }
 
     private static List<int> LowerHull(double[] y, double[] value)

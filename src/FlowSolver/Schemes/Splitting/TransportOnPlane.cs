@@ -17,19 +17,26 @@ internal abstract class TransportOnPlane
     /// <summary>Length that tolerances are relative to.</summary>
     protected double Scale { get; }
 
-    protected TransportOnPlane(Potential landscape, double length, double scale)
+    /// <summary>First axis.</summary>
+    protected Interval X { get; }
+
+    /// <summary>Second axis.</summary>
+    protected Interval Y { get; }
+
+    protected TransportOnPlane(Potential landscape, double length, Interval x, Interval y)
     {
-        Landscape = landscape;
+        Landscape = new ContinuedPotential(landscape, x, y);
         Length = length;
-        Scale = scale;
+        (X, Y) = (x, y);
+        Scale = Math.Max(x.Length, y.Length);
     }
 
     /// <summary>Builds the map of a kind.</summary>
-    public static TransportOnPlane Create(TransportMap kind, Potential potential, double length, double scale) => kind switch
+    public static TransportOnPlane Create(TransportMap kind, Potential potential, double length, Interval x, Interval y) => kind switch
     {
-        TransportMap.Gradient => new GradientOnPlane(potential, length, scale),
-        TransportMap.Proximal => new ProximalOnPlane(potential, length, scale),
-        _ => new CharacteristicOnPlane(potential, length, scale),
+        TransportMap.Gradient => new GradientOnPlane(potential, length, x, y),
+        TransportMap.Proximal => new ProximalOnPlane(potential, length, x, y),
+        _ => new CharacteristicOnPlane(potential, length, x, y),
     };
 
     /// <summary>Writes the images.</summary>
@@ -75,7 +82,7 @@ internal abstract class TransportOnPlane
 }
 
 /// <summary>x ↦ x − t∇V(x).</summary>
-internal sealed class GradientOnPlane(Potential landscape, double length, double scale) : TransportOnPlane(landscape, length, scale)
+internal sealed class GradientOnPlane(Potential landscape, double length, Interval x, Interval y) : TransportOnPlane(landscape, length, x, y)
 {
     public override void Map(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> mappedX, Span<double> mappedY)
     {
@@ -144,8 +151,11 @@ internal sealed class GradientOnPlane(Potential landscape, double length, double
         $"The gradient map folds, for instance at x = {x:g4}, y = {y:g4}: step times mobility times the largest curvature of V is above 1 there; the mass that lands on the same place is added up.");
 }
 
-/// <summary>x ↦ the minimiser of |z − x|²/(2t) + V(z) that Newton's descent from x finds: the only one where I + tD²V is positive definite.</summary>
-internal sealed class ProximalOnPlane(Potential landscape, double length, double scale) : TransportOnPlane(landscape, length, scale)
+/// <summary>
+/// x ↦ the minimiser of |z − x|²/(2t) + V(z) over the domain that Newton's descent from x finds: the only one where I + tD²V is positive definite. A coordinate at a wall that the
+/// objective falls towards is held there.
+/// </summary>
+internal sealed class ProximalOnPlane(Potential landscape, double length, Interval x, Interval y) : TransportOnPlane(landscape, length, x, y)
 {
     public override void Map(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> mappedX, Span<double> mappedY)
     {
@@ -155,6 +165,8 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
         var (stepX, stepY) = (new double[x.Length], new double[x.Length]);
         var share = new double[x.Length];
         var done = new bool[x.Length];
+        var (lowX, highX) = Bounds(X);
+        var (lowY, highY) = Bounds(Y);
         x.CopyTo(mappedX);
         y.CopyTo(mappedY);
         share.AsSpan().Fill(1);
@@ -173,6 +185,9 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
                 var objective = 0.5 * (dx * dx + dy * dy) + Length * jets.Value[i];
                 var gx = dx + Length * jets.GradientX[i];
                 var gy = dy + Length * jets.GradientY[i];
+                // A coordinate that the objective pushes into its wall is out of the reckoning.
+                var heldX = (mappedX[i] <= lowX && gx > 0) || (mappedX[i] >= highX && gx < 0);
+                var heldY = (mappedY[i] <= lowY && gy > 0) || (mappedY[i] >= highY && gy < 0);
                 var rounding = 1e-15 * (Math.Abs(objective) + Scale * Scale);
                 if (!(objective <= best[i] + 1e-4 * share[i] * slopeAlong[i] + rounding) || !double.IsFinite(gx) || !double.IsFinite(gy))
                 {
@@ -184,18 +199,19 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
                         continue;
                     }
 
-                    (mappedX[i], mappedY[i]) = (oldX[i] + share[i] * stepX[i], oldY[i] + share[i] * stepY[i]);
+                    (mappedX[i], mappedY[i]) = (Math.Clamp(oldX[i] + share[i] * stepX[i], lowX, highX), Math.Clamp(oldY[i] + share[i] * stepY[i], lowY, highY));
                     open = true;
                     continue;
                 }
 
+                (gx, gy) = (heldX ? 0 : gx, heldY ? 0 : gy);
                 if (Math.Abs(gx) + Math.Abs(gy) <= 1e-15 * Scale)
                 {
                     done[i] = true;
                     continue;
                 }
 
-                var (xx, xy, yy) = (1 + Length * jets.HessianXX[i], Length * jets.HessianXY[i], 1 + Length * jets.HessianYY[i]);
+                var (xx, xy, yy) = (1 + Length * jets.HessianXX[i], heldX || heldY ? 0 : Length * jets.HessianXY[i], 1 + Length * jets.HessianYY[i]);
                 // Where the objective is not convex its curvature is raised until it is.
                 var lowest = 0.5 * (xx + yy) - Math.Sqrt(0.25 * (xx - yy) * (xx - yy) + xy * xy);
                 if (!(lowest > 1e-3))
@@ -206,10 +222,10 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
 
                 var determinant = xx * yy - xy * xy;
                 (stepX[i], stepY[i]) = (-(yy * gx - xy * gy) / determinant, -(xx * gy - xy * gx) / determinant);
-                slopeAlong[i] = gx * stepX[i] + gy * stepY[i];
                 (oldX[i], oldY[i], best[i], share[i]) = (mappedX[i], mappedY[i], objective, 1);
-                mappedX[i] += stepX[i];
-                mappedY[i] += stepY[i];
+                (mappedX[i], mappedY[i]) = (Math.Clamp(oldX[i] + stepX[i], lowX, highX), Math.Clamp(oldY[i] + stepY[i], lowY, highY));
+                (stepX[i], stepY[i]) = (mappedX[i] - oldX[i], mappedY[i] - oldY[i]);
+                slopeAlong[i] = gx * stepX[i] + gy * stepY[i];
                 if (Math.Abs(stepX[i]) + Math.Abs(stepY[i]) <= 1e-15 * Scale)
                     done[i] = true;
                 else
@@ -226,6 +242,9 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
                 (mappedX[i], mappedY[i]) = AtKink(x[i], y[i], oldX[i], oldY[i]);
         }
     }
+
+    private static (double Low, double High) Bounds(Interval interval)
+        => interval.Ends == AxisEnds.Periodic ? (double.NegativeInfinity, double.PositiveInfinity) : (interval.From, interval.To);
 
     // Newton stops short at a point where V has no derivative; a search along shrinking crosses does not need one.
     private (double X, double Y) AtKink(double x, double y, double fromX, double fromY)
@@ -280,13 +299,22 @@ internal sealed class ProximalOnPlane(Potential landscape, double length, double
         $"The proximal map is not unique around x = {x:g4}, y = {y:g4}: 1 + step times mobility times the least curvature of V is below 0 there; the minimiser downhill of each point was taken.");
 }
 
-/// <summary>x ↦ x(t) of ẋ = −∇V(x).</summary>
-internal sealed class CharacteristicOnPlane(Potential landscape, double length, double scale) : TransportOnPlane(landscape, length, scale)
+/// <summary>x ↦ x(t) of ẋ = −∇V(x). A wall that V pushes into holds what reaches it, while it may slide along.</summary>
+internal sealed class CharacteristicOnPlane(Potential landscape, double length, Interval x, Interval y) : TransportOnPlane(landscape, length, x, y)
 {
     private static readonly (double At, double Weight)[] TimeRule = Rule();
 
     public override void Map(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> mappedX, Span<double> mappedY)
-        => CharacteristicFlow.Advance(Landscape, x, y, Length, mappedX, mappedY, Scale, double.PositiveInfinity);
+    {
+        CharacteristicFlow.Advance(Landscape, x, y, Length, mappedX, mappedY, Scale, double.PositiveInfinity);
+        for (var i = 0; i < x.Length; i++)
+        {
+            if (X.Ends == AxisEnds.Reflecting)
+                mappedX[i] = Math.Clamp(mappedX[i], X.From, X.To);
+            if (Y.Ends == AxisEnds.Reflecting)
+                mappedY[i] = Math.Clamp(mappedY[i], Y.From, Y.To);
+        }
+    }
 
     // The volume ratio of the flow backwards in time is the exponential of ∫ ΔV along the path (Liouville).
     public override void MapBack(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> originX, Span<double> originY, Span<double> volume)
