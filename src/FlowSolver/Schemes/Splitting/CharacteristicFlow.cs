@@ -6,16 +6,15 @@ namespace FlowSolver.Schemes.Splitting;
 /// Integrates ẋ = −∇V(x) (or +∇V for a negative time) for many points at once, to about 1e-13 of the domain.
 /// </summary>
 /// <remarks>
-/// Modified midpoint rule with 2, 4, …, 14 substeps extrapolated to order 14 (W. Gragg, SIAM J. Numer. Anal. 2 (1965) 384-403; E. Hairer, S. Nørsett, G. Wanner, Solving
-/// Ordinary Differential Equations I, 2nd ed. 1993, §II.9); the number of equal steps is doubled until the last two columns agree. Points that leave
-/// the neighbourhood of the domain (a flow backwards in time may reach infinity) become NaN.
+/// Modified midpoint rule with 2, 4, …, 14 substeps extrapolated to order 14, or as far as the last two columns need to agree (W. Gragg, SIAM J. Numer. Anal. 2 (1965) 384-403; E. Hairer,
+/// S. Nørsett, G. Wanner, Solving Ordinary Differential Equations I, 2nd ed. 1993, §II.9); the number of equal steps is doubled until they do. On a flow backwards in time, where all but the points
+/// that came from inside leave the domain, points become NaN as they leave.
 /// </remarks>
 internal static class CharacteristicFlow
 {
     private const int Columns = 7;
     private const double Tolerance = 2e-14;
     private const int MostSteps = 1 << 12;
-    private const int FewSteps = 1 << 7;
 
     /// <summary>Advances points.</summary>
     /// <param name="potential">V.</param>
@@ -25,29 +24,29 @@ internal static class CharacteristicFlow
     /// <param name="endX">Receives first coordinates.</param>
     /// <param name="endY">Receives second coordinates.</param>
     /// <param name="scale">Length that the tolerance is relative to.</param>
-    /// <param name="limit">A point farther than this from the origin is given up; infinite to keep all.</param>
+    /// <param name="inside">Reflecting axes that a point may not leave; null to keep all points.</param>
     public static void Advance(
-        Potential potential, ReadOnlySpan<double> x, ReadOnlySpan<double> y, double time, Span<double> endX, Span<double> endY, double scale, double limit)
+        Potential potential, ReadOnlySpan<double> x, ReadOnlySpan<double> y, double time, Span<double> endX, Span<double> endY, double scale,
+        (Interval X, Interval Y)? inside = null)
     {
         var plane = y.Length > 0;
         var count = x.Length;
         Span<double> memory = new double[(plane ? 2 : 1) * count * (Columns + 5)];
-        // Where points may be lost to infinity, a few halvings must show it: no step is short enough to follow them.
-        var mostSteps = double.IsFinite(limit) ? FewSteps : MostSteps;
         for (var steps = 1; ; steps *= 2)
         {
             x.CopyTo(endX);
             y.CopyTo(endY);
             var good = true;
-            for (var s = 0; s < steps && (good || steps >= mostSteps); s++)
-                good &= Step(potential, endX, endY, time / steps, scale, limit, memory, steps >= Math.Min(16, mostSteps));
-            if (good || steps >= mostSteps)
+            for (var s = 0; s < steps && (good || steps >= MostSteps); s++)
+                good &= Step(potential, endX, endY, time / steps, scale, inside, memory);
+            if (good || steps >= MostSteps)
                 return;
         }
     }
 
     private static bool Step(
-        Potential potential, Span<double> x, Span<double> y, double step, double scale, double limit, Span<double> memory, bool fine)
+        Potential potential, Span<double> x, Span<double> y, double step, double scale, (Interval X, Interval Y)? inside,
+        Span<double> memory)
     {
         var count = x.Length;
         var plane = y.Length > 0;
@@ -92,26 +91,42 @@ internal static class CharacteristicFlow
                 for (var i = 0; i < size; i++)
                     older[i] = lower[i] + (lower[i] - older[i]) * weight;
             }
+
+            if (column >= 2 && Accept(table[..size], table.Slice(size, size), start, x, y, scale, inside))
+                return true;
         }
 
+        return false;
+    }
+
+    // Takes over the best column; true when it agrees with the next best wherever that matters.
+    private static bool Accept(
+        ReadOnlySpan<double> best, ReadOnlySpan<double> next, ReadOnlySpan<double> start, Span<double> x, Span<double> y, double scale,
+        (Interval X, Interval Y)? inside)
+    {
         var good = true;
-        for (var i = 0; i < size; i++)
+        for (var i = 0; i < x.Length; i++)
         {
-            var error = Math.Abs(table[i] - table[size + i]);
-            var value = table[i];
-            var gone = !double.IsFinite(start[i]) || (plane && !double.IsFinite(start[i < count ? i + count : i - count]))
-                || (fine && (Math.Abs(value) > limit || !double.IsFinite(value)));
-            if (gone)
-                value = double.NaN;
-            else if (!(error <= Tolerance * (scale + Math.Abs(value))))
-                good = false;
-            if (i < count)
-                x[i] = value;
-            else
-                y[i - count] = value;
+            var error = Math.Abs(best[i] - next[i]);
+            x[i] = best[i];
+            if (y.Length > 0)
+            {
+                error = Math.Max(error, Math.Abs(best[x.Length + i] - next[x.Length + i]));
+                y[i] = best[x.Length + i];
+                if (inside is { } domain && (!double.IsFinite(start[i]) || Left(domain.X, x[i]) || Left(domain.Y, y[i])))
+                {
+                    (x[i], y[i]) = (double.NaN, double.NaN);
+                    continue;
+                }
+            }
+
+            good &= error <= Tolerance * (scale + Math.Abs(best[i]));
         }
 
         return good;
+
+        static bool Left(Interval interval, double position)
+            => interval.Ends == AxisEnds.Reflecting && !(position >= interval.From - 1e-12 * interval.Length && position <= interval.To + 1e-12 * interval.Length);
     }
 
     private static void Slopes(Potential potential, Span<double> at, Span<double> slope, int count, bool plane)

@@ -1,3 +1,4 @@
+using FlowSolver.Foundation;
 using FlowSolver.Grids;
 
 namespace FlowSolver.Schemes.Splitting;
@@ -170,16 +171,19 @@ internal sealed class PullBackOnPlane
     private readonly double[] placeX;
     private readonly double[] placeY;
     private readonly double[] volume;
+    private readonly WorkerTeam team;
 
-    public PullBackOnPlane(ChainOnPlane chain, Axis axisX, Axis axisY)
+    public PullBackOnPlane(ChainOnPlane chain, Axis axisX, Axis axisY, WorkerTeam team)
     {
+        this.team = team;
         (this.axisX, this.axisY) = (axisX, axisY);
         var count = checked(axisX.Cells * axisY.Cells);
         (placeX, placeY, volume) = (new double[count], new double[count], new double[count]);
-        Span<double> x = stackalloc double[TransportOnPlane.Chunk];
-        Span<double> y = stackalloc double[TransportOnPlane.Chunk];
-        for (var first = 0; first < count; first += TransportOnPlane.Chunk)
+        team.Run((count + TransportOnPlane.Chunk - 1) / TransportOnPlane.Chunk, block =>
         {
+            Span<double> x = stackalloc double[TransportOnPlane.Chunk];
+            Span<double> y = stackalloc double[TransportOnPlane.Chunk];
+            var first = block * TransportOnPlane.Chunk;
             var part = Math.Min(TransportOnPlane.Chunk, count - first);
             for (var i = 0; i < part; i++)
                 (x[i], y[i]) = (axisX.Center((first + i) % axisX.Cells), axisY.Center((first + i) / axisX.Cells));
@@ -189,7 +193,7 @@ internal sealed class PullBackOnPlane
                 placeX[i] = (placeX[i] - axisX.Interval.From) / axisX.Width - 0.5;
                 placeY[i] = (placeY[i] - axisY.Interval.From) / axisY.Width - 0.5;
             }
-        }
+        });
     }
 
     /// <summary>Writes the image of a density.</summary>
@@ -200,8 +204,11 @@ internal sealed class PullBackOnPlane
     {
         for (var i = 0; i < source.Length; i++)
             logs[i] = source[i] > 1e-290 ? Math.Log(source[i]) : double.NaN;
-        for (var i = 0; i < destination.Length; i++)
-            destination[i] = volume[i] > 0 ? volume[i] * At(source, logs, placeX[i], placeY[i]) : 0;
+        team.Run(axisY.Cells, row =>
+        {
+            for (var i = row * axisX.Cells; i < (row + 1) * axisX.Cells; i++)
+                destination[i] = volume[i] > 0 ? volume[i] * At(source, logs, placeX[i], placeY[i]) : 0;
+        });
     }
 
     private double At(double[] source, double[] logs, double px, double py)

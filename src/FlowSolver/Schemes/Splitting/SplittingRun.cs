@@ -13,7 +13,7 @@ internal sealed class SplittingRun : FlowRun
     private const int MostCells = 1 << 22;
     private const int MostPrepared = 6;
     private const int BandCells = 2;
-    private const double BandShare = 1e-10;
+    private const double BandShare = 1e-8;
 
     private readonly SplitPart[] parts;
     private readonly (Potential AlongX, Potential AlongY)? separated;

@@ -242,7 +242,7 @@ internal sealed class MapsOnGrid
     public Action<double[], double[], double[]> PushForward(WorkerTeam team)
     {
         if (onPlane is not null && onPlane.IsOneToOne)
-            return new PullBackOnPlane(onPlane, X, Y!).Apply;
+            return new PullBackOnPlane(onPlane, X, Y!, team).Apply;
         if (onPlane is not null)
         {
             // No single preimage to look at: masses go to the two nearest cells an axis, which keeps mass and mean.

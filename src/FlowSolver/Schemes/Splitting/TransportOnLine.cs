@@ -172,7 +172,7 @@ internal sealed class CharacteristicOnLine : TransportOnLine
             for (var i = 0; i < x.Length; i += Chunk)
             {
                 var part = Math.Min(Chunk, x.Length - i);
-                CharacteristicFlow.Advance(potential, x.Slice(i, part), [], length, mapped.Slice(i, part), [], interval.Length, double.PositiveInfinity);
+                CharacteristicFlow.Advance(potential, x.Slice(i, part), [], length, mapped.Slice(i, part), [], interval.Length);
             }
 
             return;
@@ -211,7 +211,7 @@ internal sealed class CharacteristicOnLine : TransportOnLine
             var piece = new PotentialPiece(potential, low, high);
             var scale = interval.Length;
             from[0] = at;
-            CharacteristicFlow.Advance(piece, from, [], left, to, [], scale, double.PositiveInfinity);
+            CharacteristicFlow.Advance(piece, from, [], left, to, [], scale);
             if (to[0] > low && to[0] < high)
                 return to[0];
             var end = to[0] >= high ? high : low;
@@ -226,7 +226,7 @@ internal sealed class CharacteristicOnLine : TransportOnLine
                 var middle = guess > early && guess < late ? guess : 0.5 * (early + late);
                 if (!(middle > early && middle < late))
                     break;
-                CharacteristicFlow.Advance(piece, from, [], middle, to, [], scale, double.PositiveInfinity);
+                CharacteristicFlow.Advance(piece, from, [], middle, to, [], scale);
                 if (end > at ? to[0] >= end : to[0] <= end)
                     late = middle;
                 else

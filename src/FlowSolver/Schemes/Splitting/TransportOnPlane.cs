@@ -306,7 +306,7 @@ internal sealed class CharacteristicOnPlane(Potential landscape, double length, 
 
     public override void Map(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> mappedX, Span<double> mappedY)
     {
-        CharacteristicFlow.Advance(Landscape, x, y, Length, mappedX, mappedY, Scale, double.PositiveInfinity);
+        CharacteristicFlow.Advance(Landscape, x, y, Length, mappedX, mappedY, Scale);
         for (var i = 0; i < x.Length; i++)
         {
             if (X.Ends == AxisEnds.Reflecting)
@@ -324,11 +324,7 @@ internal sealed class CharacteristicOnPlane(Potential landscape, double length, 
         var stiffest = 0.0;
         for (var i = 0; i < x.Length; i++)
             stiffest = Math.Max(stiffest, Math.Abs(jets.HessianXX[i]) + Math.Abs(jets.HessianYY[i]));
-        var parts = (int)Math.Clamp(Math.Ceiling(Length * stiffest), 1, 16);
-        var limit = 0.0;
-        for (var i = 0; i < x.Length; i++)
-            limit = Math.Max(limit, Math.Max(Math.Abs(x[i]), Math.Abs(y[i])));
-        limit += 4 * Scale;
+        var parts = (int)Math.Clamp(Math.Ceiling(0.5 * Length * stiffest), 1, 4);
         x.CopyTo(originX);
         y.CopyTo(originY);
         var (nextX, nextY) = (new double[x.Length], new double[x.Length]);
@@ -339,7 +335,7 @@ internal sealed class CharacteristicOnPlane(Potential landscape, double length, 
             for (var k = 0; k <= TimeRule.Length; k++)
             {
                 var at = k < TimeRule.Length ? TimeRule[k].At : 1;
-                CharacteristicFlow.Advance(Landscape, originX, originY, -(at - before) * Length / parts, nextX, nextY, Scale, limit);
+                CharacteristicFlow.Advance(Landscape, originX, originY, -(at - before) * Length / parts, nextX, nextY, Scale, (X, Y));
                 nextX.CopyTo(originX);
                 nextY.CopyTo(originY);
                 before = at;
@@ -365,7 +361,7 @@ internal sealed class CharacteristicOnPlane(Potential landscape, double length, 
 
     private static (double At, double Weight)[] Rule()
     {
-        var rule = new MathNet.Numerics.Integration.GaussLegendreRule(0, 1, 8);
-        return [.. Enumerable.Range(0, 8).Select(k => (rule.GetAbscissa(k), rule.GetWeight(k))).OrderBy(pair => pair.Item1)];
+        var rule = new MathNet.Numerics.Integration.GaussLegendreRule(0, 1, 6);
+        return [.. Enumerable.Range(0, 6).Select(k => (rule.GetAbscissa(k), rule.GetWeight(k))).OrderBy(pair => pair.Item1)];
     }
 }
