@@ -174,37 +174,22 @@ internal sealed class PanelPainter(FigureStyle style)
         x.MajorGridlineStyle = y.MajorGridlineStyle = LineStyle.None;
         plot.Axes.Add(x);
         plot.Axes.Add(y);
-        plot.Axes.Add(new LinearColorAxis
+        plot.Annotations.Add(new ImageAnnotation
         {
-            Position = AxisPosition.None,
-            Minimum = 0,
-            Maximum = panel.ColorMaximum > 0 ? panel.ColorMaximum : 1,
-            Palette = OxyPalette.Interpolate(256, [.. style.MapColors.Select(Color)]),
-            Key = "density",
-        });
-        var data = new double[grid.Nx, grid.Ny];
-        for (var row = 0; row < grid.Ny; row++)
-        {
-            for (var i = 0; i < grid.Nx; i++)
-                data[i, row] = Math.Clamp(panel.Density.Values[row * grid.Nx + i], 0, panel.ColorMaximum);
-        }
-
-        plot.Series.Add(new HeatMapSeries
-        {
-            X0 = gx.Center(0),
-            X1 = gx.Center(grid.Nx - 1),
-            Y0 = gy.Center(0),
-            Y1 = gy.Center(grid.Ny - 1),
-            Data = data,
+            ImageSource = Picture(panel),
+            X = new PlotLength(gx.Interval.From, PlotLengthUnit.Data),
+            Y = new PlotLength(gy.Interval.From, PlotLengthUnit.Data),
+            Width = new PlotLength(gx.Interval.Length, PlotLengthUnit.Data),
+            Height = new PlotLength(gy.Interval.Length, PlotLengthUnit.Data),
+            HorizontalAlignment = HorizontalAlignment.Left,
+            VerticalAlignment = VerticalAlignment.Bottom,
             Interpolate = false,
-            RenderMethod = HeatMapRenderMethod.Bitmap,
-            ColorAxisKey = "density",
+            Layer = AnnotationLayer.BelowAxes,
         });
         if (panel.Levels is not null)
             plot.Series.Add(MakeLevels(panel, gx, gy));
         if (panel.PointsX.Count > 0)
         {
-            // Not a scatter series: that would take its colours from the map's scale.
             var points = new LineSeries
             {
                 LineStyle = LineStyle.None,
@@ -230,6 +215,22 @@ internal sealed class PanelPainter(FigureStyle style)
                 HeadWidth = 3,
             });
         }
+    }
+
+    // One pixel a cell; the upper row of the picture is the last row of cells.
+    private OxyImage Picture(MapPanel panel)
+    {
+        var grid = panel.Density.Grid;
+        var palette = OxyPalette.Interpolate(256, [.. style.MapColors.Select(Color)]).Colors.Select(color => (color.R, color.G, color.B)).ToList();
+        var greatest = panel.ColorMaximum > 0 ? panel.ColorMaximum : 1;
+        var indices = new byte[grid.CellCount];
+        for (var row = 0; row < grid.Ny; row++)
+        {
+            for (var i = 0; i < grid.Nx; i++)
+                indices[(grid.Ny - 1 - row) * grid.Nx + i] = (byte)Math.Round(255 * Math.Clamp(panel.Density.Values[row * grid.Nx + i] / greatest, 0, 1));
+        }
+
+        return new OxyImage(PalettePng.Encode(indices, grid.Nx, grid.Ny, palette));
     }
 
     private ContourSeries MakeLevels(MapPanel panel, Grids.Axis gx, Grids.Axis gy)

@@ -111,6 +111,23 @@ public sealed class FigureTests : IDisposable
         Assert.All(budget.Panels, part => Assert.DoesNotContain(((LinePanel)part).Curves, curve => curve.Label == "grid"));
     }
 
+    // Held against another decoder. Mutation tried: rows written from the bottom; fails.
+    [SkippableFact]
+    public void PalettePng_ReadByTheDrawingLibrary_GivesBackEveryPixel()
+    {
+        using var writer = new FigureWriter();
+        Skip.If(writer.Problem is not null, writer.Problem ?? "");
+        var palette = Enumerable.Range(0, 256).Select(i => ((byte)i, (byte)(255 - i), (byte)(i / 2))).ToList();
+        var indices = Enumerable.Range(0, 70 * 33).Select(i => (byte)(i * 7 + i / 70)).ToArray();
+        using var bitmap = SkiaSharp.SKBitmap.Decode(PalettePng.Encode(indices, 70, 33, palette));
+        Assert.Equal((70, 33), (bitmap.Width, bitmap.Height));
+        for (var i = 0; i < indices.Length; i++)
+        {
+            var color = bitmap.GetPixel(i % 70, i / 70);
+            Assert.Equal(palette[indices[i]], (color.Red, color.Green, color.Blue));
+        }
+    }
+
     [Fact]
     public void Looks_TellMethodsApartWithoutColour()
     {
