@@ -44,7 +44,7 @@ public static class AuditReport
         ArgumentNullException.ThrowIfNull(provenance);
         var look = style ?? FigureStyle.Default;
         var table = Rows(rows, labels);
-        var sections = new List<PageSection> { new TableSection("Set by set", "The rows of audit.csv.", table) };
+        var sections = new List<PageSection> { new TableSection("Set by set", "The rows of audit.csv, without the causes, which stand above.", WithoutCause(table)) };
         var figures = new List<Figure>();
         foreach (var (row, index) in rows.Select((row, index) => (row, index)))
         {
@@ -81,6 +81,9 @@ public static class AuditReport
         var page = new PageModel("audit", title, $"Do the samples {string.Join(", ", rows.Select(row => row.Samples).Take(4))} follow the law of the case?", verdict, numbers, sections);
         return new StudyReport(page, alternatives.Rows.Count > 0 ? [table, alternatives] : [table], [], figures, provenance, rows.Any(row => row.Verdict == "not measured"));
     }
+
+    private static Table WithoutCause(Table table)
+        => new(table.Name, [.. table.Columns.SkipLast(1)], [.. table.Rows.Select(IReadOnlyList<Cell> (row) => [.. row.SkipLast(1)])], table.Caption);
 
     private static string Sentence(AuditRow row, CaseLabels labels)
     {
