@@ -93,10 +93,13 @@ internal sealed partial class CaseTree
         }
         catch (TomlException exception)
         {
-            var at = exception.Diagnostics.Count > 0 ? exception.Diagnostics[0].Span.Start : default;
-            faults.Add(new InputFault(
-                $"The text is not TOML: {Sentence(exception.Diagnostics.Count > 0 ? exception.Diagnostics[0].Message : exception.Message)}",
-                File: file, Line: at.Line + 1, Column: at.Column + 1));
+            faults.Add(new InputFault($"The text is not TOML: {Sentence(exception.Message)}", File: file, Line: exception.Line ?? LineOfDepth(text), Column: exception.Column));
+            return null;
+        }
+        catch (ArgumentOutOfRangeException)
+        {
+            // The parser falls over a backslash that is the last character of the text, inside quotes that were never closed.
+            faults.Add(new InputFault("The text is not TOML: it ended inside quotes.", "Close them.", file, text.AsSpan().Count('\n') + 1));
             return null;
         }
 
@@ -120,6 +123,23 @@ internal sealed partial class CaseTree
         var root = new CaseTable(1);
         new CaseTree(file, faults).Fill(document, root);
         return root;
+    }
+
+    /// <summary>The line on which brackets are first nested too deep; the parser does not say. Brackets inside text count too, which may place it early.</summary>
+    private static int? LineOfDepth(string text)
+    {
+        var (depth, line) = (0, 1);
+        foreach (var character in text)
+        {
+            if (character == '\n')
+                line++;
+            else if (character is '[' or '{' && ++depth > DeepestNesting)
+                return line;
+            else if (character is ']' or '}')
+                depth = Math.Max(0, depth - 1);
+        }
+
+        return null;
     }
 
     /// <summary>Reads one value as it would stand in a file; for the defaults of the table of keys.</summary>

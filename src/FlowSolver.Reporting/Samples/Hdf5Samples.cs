@@ -13,15 +13,21 @@ internal static class Hdf5Samples
         CheckLength(path);
         try
         {
-            using var file = H5File.OpenRead(path);
+            using var stream = new Hdf5Stream(path);
+            var links = new Hdf5Links(stream);
+            foreach (var name in new[] { "samples", "x", "y", "time" })
+            {
+                if (links.IsSoft(name))
+                    throw SamplesReader.Fault(path, $"{name} was a link to another place; it must be a dataset of the root group itself.", "Copy the data instead of linking them.");
+            }
+
+            // The library takes the position that it finds for the beginning of the file.
+            stream.Position = 0;
+            using var file = H5File.Open(stream, leaveOpen: true);
             if (file.LinkExists("samples"))
                 return ReadOne(Dataset(file, "samples", path), path, dimension);
             if (!file.LinkExists("x"))
-            {
-                var names = string.Join(", ", file.Children().Take(8).Select(child => child.Name));
-                throw SamplesReader.Fault(path, $"The file had no dataset x and none called samples{(names.Length > 0 ? $" (it has {names})" : "")}; it must have x[, y][, time] or samples.");
-            }
-
+                throw SamplesReader.Fault(path, "The file had no dataset x and none called samples; it must have x[, y][, time] or samples.");
             if (file.LinkExists("y") != (dimension == 2))
                 throw SamplesReader.WrongDimension(path, dimension == 2 ? "no dataset y" : "a dataset y", dimension);
             var x = Column(file, "x", path, null);
@@ -33,7 +39,11 @@ internal static class Hdf5Samples
         {
             throw;
         }
-        catch (Exception exception) when (exception is not OutOfMemoryException)
+        catch (OutOfMemoryException)
+        {
+            throw SamplesReader.Fault(path, "The file asked for more memory than there is.", "It is damaged or too large.");
+        }
+        catch (Exception exception)
         {
             // The library throws many kinds on a damaged file; none of them is the program's own fault.
             throw SamplesReader.Fault(path, $"The file could not be read as HDF5: {SamplesReader.FirstLine(exception.Message)}", "Write it again; it is damaged or uses a feature that is not read.");
