@@ -12,11 +12,13 @@ internal static class PeerRows
         GaussianBenchmarks.Peer,
         JkoPlaneBenchmarks.Middle,
         JkoPlaneBenchmarks.Large,
+        PlaneTransportBenchmarks.Peer,
     ];
 
     public static IReadOnlyList<GrowthRow> Growth { get; } =
     [
         ExactFlowBenchmarks.Growth,
         JkoPlaneBenchmarks.Growth,
+        PlaneTransportBenchmarks.Growth,
     ];
 }

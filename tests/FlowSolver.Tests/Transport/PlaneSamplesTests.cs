@@ -11,8 +11,8 @@ namespace FlowSolver.Tests.Transport;
 
 /// <summary>
 /// Mutations tried: the floor of the linearised weight left out (the stray-sample test fails); the alias of the table ignored (the calibration
-/// theory fails, p-values near 0); the direction's half step left out (the sliced translation fails); back and forward parts of the interpolation
-/// exchanged (its mean fails).
+/// test fails); the directions spread over the closed half turn (the sliced translation fails); the two parts of the interpolation weighed wrongly (its
+/// mass fails).
 /// </summary>
 public sealed class PlaneSamplesTests(ITestOutputHelper output)
 {

@@ -10,8 +10,8 @@ namespace FlowSolver.Tests.Transport;
 
 /// <summary>
 /// Mutations tried: the sign of the mixed derivative in Newton's determinant turned round (the Bures theory fails); the rounding of the plan left
-/// out (the bracket theory against linear programs fails, High falls below); the contact test left out (the far normal pair fails); the half turn of
-/// the circle in the plan's moves left out (the torus rows fail).
+/// out (the bracket theory against linear programs fails, High falls below); the double transform in the tails left out (the normal pairs' brackets
+/// fail); the half turn of the circle in the plan's moves left out (the torus rows fail).
 /// </summary>
 public sealed class PlaneTransportTests(ITestOutputHelper output)
 {
@@ -337,9 +337,9 @@ public sealed class PlaneTransportTests(ITestOutputHelper output)
         Assert.Equal(0, GC.GetAllocatedBytesForCurrentThread() - before);
     }
 
-    /// <summary>V convex with V″ ≥ 1: two exact flows draw together in W2 at least as fast as e^(−t), and Talagrand's inequality holds along them.</summary>
+    /// <summary>V convex with V″ ≥ 1: two exact flows draw together in W2 at least as fast as e^(−t), and Talagrand's and the HWI inequality hold along them.</summary>
     [Fact]
-    public void Solve_FlowsOfAConvexPotential_ContractAndObeyTalagrand()
+    public void Solve_FlowsOfAConvexPotential_ContractAndObeyTalagrandAndHwi()
     {
         const double temperature = 0.5;
         var potential = new PlanePotential(1.5, 0.4, 1.4, 0.3);
@@ -348,6 +348,7 @@ public sealed class PlaneTransportTests(ITestOutputHelper output)
         var runs = new[] { Normal(grid, -1, 0.6, 0.1, 0.2, 0.03), Normal(grid, 0.9, -0.5, 0.25, 0.1, 0) }
             .Select(start => new FlowSolver.Schemes.ExactFlow.ExactFlowScheme().Begin(problem, start, WorkerTeam.Alone)).ToArray();
         const double least = 1.45 - 0.40311288741492746;
+        var generator = new FlowSolver.Schemes.ExactFlow.Generator(problem, WorkerTeam.Alone);
         var before = PlaneTransport.Between(runs[0].Snapshot(), runs[1].Snapshot(), WorkerTeam.Alone).Distance;
         for (var k = 0; k < 3; k++)
         {
@@ -359,7 +360,11 @@ public sealed class PlaneTransportTests(ITestOutputHelper output)
             before = now.Distance;
             var density = runs[0].Snapshot();
             var toRest = PlaneTransport.Between(density, problem.Equilibrium, WorkerTeam.Alone).Distance;
-            Assert.True(toRest * toRest <= 2 / least * temperature * problem.RelativeEntropy(density.Values) * (1 + 1e-3));
+            var excess = temperature * problem.RelativeEntropy(density.Values);
+            Assert.True(toRest * toRest <= 2 / least * excess * (1 + 1e-3));
+            // HWI (F. Otto, C. Villani, J. Funct. Anal. 173 (2000) 361): excess ≤ W2·√I − ½λW2², I = T² times the relative Fisher information.
+            var slope = temperature * Math.Sqrt(FlowSolver.Diagnostics.FisherInformation.Of(generator, density.Values));
+            Assert.True(excess <= (toRest * slope - 0.5 * least * toRest * toRest) * (1 + 1e-3));
         }
     }
 
