@@ -48,10 +48,12 @@ internal static class RunCommand
             Seed = seed ?? read.Seed,
         };
         ComparisonResult result;
+        IReadOnlyList<TransportPicture> maps;
         using (var team = new WorkerTeam(threads))
         using (var line = new ProgressLine(quiet))
         {
             result = Comparison.Run(read.Problem, read.Grid, read.Plan, options, team, line.For(read.Plan), cancellation);
+            maps = result.Interrupted ? [] : TransportMaps.Of(result, team);
         }
 
         if (result.Interrupted && result.GridErrors.Count == 0)
@@ -67,7 +69,7 @@ internal static class RunCommand
         {
             // Finished work is written out also after an interrupt: the token is not passed on. A second interrupt ends the process, and leaves a
             // directory whose name says that it is partial.
-            written = RunWriter.WriteAll(result, read.Labels, provenance, results.WorkingPath, cancellation: CancellationToken.None);
+            written = RunWriter.WriteAll(result, read.Labels, provenance, results.WorkingPath, maps, cancellation: CancellationToken.None);
             results.Commit();
         }
 
