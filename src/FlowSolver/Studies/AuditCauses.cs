@@ -1,7 +1,6 @@
 using FlowSolver.Foundation;
 using FlowSolver.Grids;
 using FlowSolver.Problems;
-using FlowSolver.Schemes;
 using FlowSolver.Schemes.Splitting;
 using FlowSolver.Transport;
 
