@@ -13,9 +13,10 @@ internal static class TransportMaps
     {
         if (result.Grid.Dimension != 2)
             return [];
-        var history = result.Densities.FirstOrDefault(densities => densities.Method == "exact") ?? result.Densities.FirstOrDefault();
-        if (history is null || history.Densities.Count < 2)
+        var shown = result.Densities.Where(densities => densities.Densities.Count >= 2).OrderByDescending(densities => densities.Method == "exact").ToList();
+        if (shown.Count == 0)
             return [];
+        var history = shown[0];
         var last = history.Densities.Count - 1;
         var transport = PlaneTransport.Solve(history.Densities[0], history.Densities[last], new PlaneTransportOptions(), team);
         var end = result.Plan.ReportTimes[last];
