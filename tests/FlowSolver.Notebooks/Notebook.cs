@@ -2,9 +2,11 @@ using System.Globalization;
 using System.Text.Encodings.Web;
 using System.Text.Json;
 using System.Text.Json.Nodes;
+using FlowSolver.Grids;
 using FlowSolver.Reporting.Figures;
 using Microsoft.CodeAnalysis.CSharp.Scripting;
 using Microsoft.CodeAnalysis.Scripting;
+using Microsoft.CodeAnalysis.Scripting.Hosting;
 
 namespace FlowSolver.Notebooks;
 
@@ -30,6 +32,11 @@ internal static class Notebook
         var options = ScriptOptions.Default.WithFilePath(path)
             .WithMetadataResolver(ScriptMetadataResolver.Default.WithBaseDirectory(Path.GetDirectoryName(path)))
             .WithImports("System", "System.Linq", "System.Collections.Generic");
+        // The cells load the library from another folder. With these two registered, the script runs on the runner's own copies, so that a Figure
+        // made in a cell is the Figure known here.
+        using var loader = new InteractiveAssemblyLoader();
+        loader.RegisterDependency(typeof(Density).Assembly);
+        loader.RegisterDependency(typeof(Figure).Assembly);
         ScriptState<object>? state = null;
         var count = 0;
         foreach (var cell in notebook["cells"]!.AsArray().Select(node => node!.AsObject()))
@@ -43,7 +50,7 @@ internal static class Notebook
             Console.SetOut(printed);
             try
             {
-                state = state is null ? await CSharpScript.RunAsync(code, options) : await state.ContinueWithAsync(code, options);
+                state = state is null ? await CSharpScript.Create<object>(code, options, assemblyLoader: loader).RunAsync() : await state.ContinueWithAsync(code, options);
             }
             catch (CompilationErrorException exception)
             {
