@@ -81,7 +81,7 @@ public sealed class AlternatingDirections
         const double least = 0.5;
         var most = least + 4 * Math.Max(0, typicalDiffusion);
         var span = Math.Log(most / least);
-        sweeps = Math.Clamp((int)Math.Ceiling(span / 2.0), 1, MostSweeps);
+        sweeps = Math.Clamp((int)Math.Ceiling(span / 1.5), 1, MostSweeps);
         for (var k = 0; k < sweeps; k++)
             shifts[k] = least * Math.Exp(span * (k + 0.5) / sweeps);
         team.Run(groups, prepareBlock);
