@@ -14,9 +14,10 @@ namespace FlowSolver.Schemes.Jko;
 /// stands in for the exact one; where that does not settle, also in tails that the step empties faster than the grid can show. What does
 /// not settle at all is solved as the convex problem it is on at most 64 × 64 cells (<see cref="PlanePrimal"/>) and then polished wherever the grid
 /// resolves the map; the report says so. Jumps of the start are spread over about two cells, and the report of the first step says so.</para>
-/// <para>Report: iterations are Krylov products; the residual is ∫ρ|G|, the L1 norm of what is left of the equation for log ρ (10⁻⁹ or less, and less
-/// near equilibrium, unless the certificate accepts more); the gap is that of <see cref="PlaneCertificate"/>. Since the objective is (1/τ)-convex
-/// along geodesics for convex V, a relative gap g puts the step within √g of the distance it moved from the exact one.</para>
+/// <para>Report: iterations are Krylov products; the residual is ∫ρ|G|, the L1 norm of what is left of the equation for log ρ (10⁻⁹, less near
+/// equilibrium, or up to 10⁻⁴ of the mean change of log ρ where tails do not settle); the gap is that of <see cref="PlaneCertificate"/>. It proves
+/// the density that the map carries; the one handed out, e^((φ−V)/T), differs from that by the residual, KL ≤ gap/T. Since the objective is
+/// (1/τ)-convex along generalised geodesics for convex V, a relative gap g puts the proved density within √g of the distance moved from the exact step.</para>
 /// <para>Cost: 3 to 5 linear systems of some few products each, independent of the grid; about 55 doubles a cell. Non-convex V: convexity, and
 /// with it uniqueness, needs 1 + τ min D²V &gt; 0; beyond that the gap need not close even at a minimum.</para>
 /// Sources: R. Jordan, D. Kinderlehrer, F. Otto, SIAM J. Math. Anal. 29 (1998) 1-17; J.-D. Benamou, G. Carlier, Q. Mérigot, É. Oudet, Numer. Math.
@@ -34,14 +35,30 @@ internal sealed class JkoPlaneRun : FlowRun
     // A relative gap that calls for no second opinion.
     private const double GoodGap = 1e-4;
 
-    // Residual relative to the change of log ρ that is left to the certificate to judge.
+    // Residual relative to the change of log ρ up to which the certificate is asked.
     private const double LooseShare = 1e-4;
     private const int PrimalCells = 64;
 
     // What is tried in turn. Tail: density relative to its maximum below which the linearised step stands in. Near: how far from solving the
-    // equation (in log ρ) the linearised step may be for a cell to count, if its density is below Share of the maximum.
-    private static readonly (double Tail, double Near, double Share)[] Attempts =
-        [(1e-10, double.PositiveInfinity, 0), (1e-8, 1, 1e-2), (1e-6, 1, 1e-2), (1e-6, 0.5, 0.1)];
+    // equation (in log ρ) the linearised step may be for a cell to count, if its density is below Share of the maximum. Held: whether tails
+    // may move by T at most in a Newton step.
+    private static readonly (double Tail, double Near, double Share, bool Held)[] FirstAttempts =
+    [
+        (1e-10, double.PositiveInfinity, 0, false),
+        (1e-8, double.PositiveInfinity, 0, false),
+        (1e-8, 1, 1e-2, true),
+        (1e-6, 1, 1e-2, true),
+    ];
+
+    // Later steps find tails that have settled: they are held from the beginning.
+    private static readonly (double Tail, double Near, double Share, bool Held)[] LaterAttempts =
+    [
+        (1e-10, double.PositiveInfinity, 0, true),
+        (1e-8, 1, 1e-2, true),
+        (1e-6, 1, 1e-2, true),
+        (1e-6, 0.5, 0.1, true),
+    ];
+
     private readonly double gapTolerance;
     private readonly PlaneNewton newton;
     private readonly PlaneEquation equation;
@@ -54,6 +71,8 @@ internal sealed class JkoPlaneRun : FlowRun
     private double lastStep;
     private PlanePrimal? primal;
     private bool startWasSpread;
+    private (Way Way, double Residual, PlaneProof Proof) best;
+    private double bestGap;
 
     public JkoPlaneRun(GridProblem problem, Density start, WorkerTeam team, double gapTolerance) : base(problem, team)
     {
@@ -100,98 +119,80 @@ internal sealed class JkoPlaneRun : FlowRun
         if (movement <= 1e-13)
             return new StepReport(products, 0, 0, 0);
         var tolerance = Math.Clamp(1e-5 * movement, 1e-14, Tolerance);
-        var solve = SolveDirectly(step, movement, tolerance, ref products);
-        var proof = default(PlaneProof);
-        var way = Way.Direct;
-        if (solve.Converged)
-        {
-            newton.SmoothTails(next);
-            Normalise(next);
-            nextSpline.Fit(next);
-            proof = certificate.Prove(next, current, nextSpline);
-        }
-
-        if (!solve.Converged || !(Math.Abs(proof.RelativeGap(equation.Temperature)) <= GoodGap))
-            SolveThroughPrimal(tolerance, ref solve, ref proof, ref way, ref products);
+        best = default;
+        bestGap = double.PositiveInfinity;
+        SolveDirectly(step, movement, tolerance, ref products);
+        if (!(bestGap <= GoodGap))
+            SolveThroughPrimal(tolerance, ref products);
+        nextSpline.Fit(next);
+        var (way, residual, proof) = best;
         var gap = proof.RelativeGap(equation.Temperature);
         (equation.Previous, nextSpline) = (nextSpline, equation.Previous);
         (before, current, next) = (current, next, before);
         lastStep = step;
-        return new StepReport(products, solve.Residual.Weighted, gap, proof.Distance, Failure(gap), Warning(way, StepsTaken == 0 && startWasSpread));
+        return new StepReport(products, residual, gap, proof.Distance, Failure(gap), Warning(way, StepsTaken == 0 && startWasSpread));
     }
 
-    // Newton's method from the linearised step or from the steps before; the usual case.
-    private PlaneSolve SolveDirectly(double step, double movement, double tolerance, ref int products)
+    // Newton's method from the linearised step or from the steps before; the usual case is the first attempt.
+    private void SolveDirectly(double step, double movement, double tolerance, ref int products)
     {
         var sameStep = StepsTaken > 0 && step == lastStep;
-        var solve = default(PlaneSolve);
-        for (var attempt = 0; attempt < Attempts.Length; attempt++)
+        foreach (var (tail, near, share, held) in StepsTaken == 0 ? FirstAttempts : LaterAttempts)
         {
-            var (tail, near, share) = Attempts[attempt];
             newton.SetTail(tail);
+            newton.HoldTails = held;
+            var first = tail == FirstAttempts[0].Tail;
             if (double.IsFinite(near))
                 newton.DistrustUnresolved(near, share);
-            if (attempt == 0 && sameStep)
+            if (first && sameStep)
             {
-                for (var i = 0; i < next.Length; i++)
-                    next[i] = 2 * current[i] - before[i];
+                for (var i = 0; i < trial.Length; i++)
+                    trial[i] = 2 * current[i] - before[i];
             }
 
-            newton.Start(next, keep: attempt == 0 && sameStep);
-            solve = newton.Solve(next, tolerance, MostNewtonSteps, patient: false);
+            newton.Start(trial, keep: first && sameStep);
+            var solve = newton.Solve(trial, tolerance, MostNewtonSteps, patient: false);
             products += solve.Products;
-            if (solve.Converged)
-                break;
+            // What is left where there is next to no mass need not matter: the certificate has the last word.
+            if (!solve.Converged && !(solve.Residual.Weighted <= LooseShare * movement))
+                continue;
+            if (!solve.Converged)
+                newton.PatchUnsolved(trial);
+            newton.SmoothTails(trial);
+            Consider(Way.Direct, solve.Residual.Weighted);
+            if (bestGap <= GoodGap)
+                return;
         }
-
-        if (!solve.Converged && solve.Residual.Weighted <= LooseShare * movement)
-        {
-            // What is left sits where there is next to no mass; the certificate has the last word.
-            newton.PatchUnsolved(next);
-            solve = solve with { Converged = true };
-        }
-
-        return solve;
     }
 
-    // The convex problem on a coarse grid, then Newton's method wherever the fine grid resolves the map. Keeps whichever has the least gap.
-    private void SolveThroughPrimal(double tolerance, ref PlaneSolve solve, ref PlaneProof proof, ref Way way, ref int products)
+    // The convex problem on a coarse grid, then Newton's method wherever the fine grid resolves the map.
+    private void SolveThroughPrimal(double tolerance, ref int products)
     {
-        var best = solve.Converged ? Math.Abs(proof.RelativeGap(equation.Temperature)) : double.PositiveInfinity;
         StandInFromPrimal();
         Array.Copy(equation.Linear, trial, trial.Length);
-        if (Consider(ref best, ref proof))
-        {
-            way = Way.Coarse;
-            solve = default;
-        }
-
-        newton.SetTail(Attempts[0].Tail);
+        newton.SetTail(FirstAttempts[0].Tail);
+        newton.HoldTails = true;
+        Consider(Way.Coarse, equation.Evaluate(trial, false).Weighted);
         newton.DistrustUnresolved(1, 2);
         newton.Start(trial, keep: false);
-        var polished = newton.Solve(trial, tolerance, MostNewtonSteps, patient: true);
-        products += polished.Products;
-        if (Consider(ref best, ref proof))
-        {
-            way = Way.Polished;
-            solve = polished;
-        }
-
-        nextSpline.Fit(next);
+        var solve = newton.Solve(trial, tolerance, MostNewtonSteps, patient: true);
+        products += solve.Products;
+        Consider(Way.Polished, solve.Residual.Weighted);
     }
 
-    private bool Consider(ref double best, ref PlaneProof proof)
+    // Certifies the trial and keeps it when its gap is the least so far.
+    private void Consider(Way way, double residual)
     {
         Normalise(trial);
         nextSpline.Fit(trial);
-        var found = certificate.Prove(trial, current, nextSpline);
-        var gap = Math.Abs(found.RelativeGap(equation.Temperature));
-        if (!(gap < best) && !double.IsPositiveInfinity(best))
-            return false;
-        best = gap;
-        proof = found;
+        var proof = certificate.Prove(trial, current, nextSpline);
+        var gap = Math.Abs(proof.RelativeGap(equation.Temperature));
+        newton.Trace?.Invoke($"  {way}: relative gap {gap:g4}");
+        if (!(gap < bestGap) && best.Way != Way.None)
+            return;
+        bestGap = double.IsNaN(gap) ? double.PositiveInfinity : gap;
+        best = (way, residual, proof);
         (next, trial) = (trial, next);
-        return true;
     }
 
     private void StandInFromPrimal()
@@ -244,8 +245,8 @@ internal sealed class JkoPlaneRun : FlowRun
         const string jumps = "The start jumps from cell to cell; its jumps were spread over about two cells.";
         return (way, spread) switch
         {
-            (Way.Direct, false) => null,
-            (Way.Direct, true) => jumps,
+            (Way.Direct or Way.None, false) => null,
+            (Way.Direct or Way.None, true) => jumps,
             (Way.Polished, false) => torn,
             (Way.Polished, true) => jumps + " " + torn,
             (_, false) => coarse,
@@ -255,6 +256,7 @@ internal sealed class JkoPlaneRun : FlowRun
 
     private enum Way
     {
+        None,
         Direct,
         Coarse,
         Polished,

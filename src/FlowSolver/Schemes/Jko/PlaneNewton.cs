@@ -44,6 +44,9 @@ internal sealed class PlaneNewton
 
     public PlaneEquation Equation { get; }
 
+    /// <summary>Whether cells of the tails may move by T at most in a step.</summary>
+    public bool HoldTails { get; set; }
+
     /// <summary>Trace of the solve for diagnosis; null in use.</summary>
     internal Action<string>? Trace { get; set; }
 
@@ -127,6 +130,8 @@ internal sealed class PlaneNewton
             if (k == most || !double.IsFinite(residual.Weighted) || refused > (patient ? 3 : 0) || residual.Weighted > 1e3 * least.Weighted)
                 break;
             products += SolveLinear(0.01, 1e-8);
+            if (HoldTails)
+                LimitInTails(phi);
             var before = residual.Weighted;
             var taken = 1.0;
             Move(phi, -1);
@@ -248,6 +253,23 @@ internal sealed class PlaneNewton
                 return;
             for (var j = 0; j < plane.Ny; j++)
                 right.AsSpan(plane.Row(j), plane.Nx).CopyTo(phi.AsSpan(plane.Row(j)));
+        }
+    }
+
+    // No cell of the tails may move by more than T in a step: what goes wild there must not stop the rest.
+    private void LimitInTails(double[] phi)
+    {
+        var plane = Equation.Plane;
+        var low = Highest(phi) + Equation.Temperature * Math.Log(TailShare);
+        var most = Equation.Temperature;
+        for (var j = 0; j < plane.Ny; j++)
+        {
+            var row = plane.Row(j);
+            for (var i = row; i < row + plane.Nx; i++)
+            {
+                if (phi[i] - Equation.CellPotential[i] < low)
+                    correction[i] = Math.Clamp(correction[i], -most, most);
+            }
         }
     }
 
