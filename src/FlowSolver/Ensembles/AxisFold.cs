@@ -29,6 +29,13 @@ internal readonly struct AxisFold
     /// <summary>Folds a span whose length is a multiple of 8; only looks at it when all of it lies inside.</summary>
     public void FoldInPlace(Span<double> x)
     {
+        if (!HoldsAll(x))
+            Fold(x, x);
+    }
+
+    /// <summary>Whether every position, of which there are a multiple of 8, lies inside.</summary>
+    public bool HoldsAll(ReadOnlySpan<double> x)
+    {
         ref var positions = ref MemoryMarshal.GetReference(x);
         var lowest = Vector512.Create(from);
         var highest = Vector512.Create(to);
@@ -55,8 +62,7 @@ internal readonly struct AxisFold
 
         lowest = Vector512.MinNative(lowest, lowestToo);
         highest = Vector512.MaxNative(highest, highestToo);
-        if (!Vector512.EqualsAll(lowest, Vector512.Create(from)) || !Vector512.EqualsAll(highest, Vector512.Create(to)))
-            Fold(x, x);
+        return Vector512.EqualsAll(lowest, Vector512.Create(from)) && Vector512.EqualsAll(highest, Vector512.Create(to));
     }
 
     [MethodImpl(MethodImplOptions.AggressiveInlining)]

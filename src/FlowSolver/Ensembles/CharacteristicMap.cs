@@ -8,20 +8,24 @@ namespace FlowSolver.Ensembles;
 /// The map that carries each point along ẋ = −∇V for a time t, for many points at once: the gradient flow itself, without a step's error.
 /// </summary>
 /// <remarks>
-/// <para>V quadratic (1-D), or |x − c|: closed form. Otherwise the embedded Runge-Kutta pair of orders 5 and 4 of J. R. Dormand, P. J. Prince,
-/// J. Comput. Appl. Math. 6 (1980) 19-26, with one step length for up to 128 points, so that the estimated error of a step, as a share of t and in
-/// each coordinate, stays below <see cref="Tolerance"/>·scale, scale the domain's size.</para>
-/// <para>A kink where V has a valley (|x|) holds whoever reaches it, as the flow does; so does a wall that V pushes into. A kink that the flow
-/// crosses costs short steps around it.</para>
-/// <para>Immutable, safe to use from several threads, allocates nothing after construction.</para>
+/// <para>V quadratic (1-D), or |x − c|: closed form. Otherwise the Runge-Kutta method of order 5 of J. R. Dormand, P. J. Prince,
+/// J. Comput. Appl. Math. 6 (1980) 19-26, with equal substeps. Their number is found once for each t by trying it on a lattice over the domain until
+/// twice as many change no coordinate by more than <see cref="Tolerance"/>·scale, scale the domain's size. It is the same for
+/// all points, so that where a point goes does not depend on who travels with it.</para>
+/// <para>A kink where V has a valley (|x|) holds whoever reaches it, as the flow does; so does a wall that V pushes into. In two dimensions that is so for a
+/// V that is a sum over the axes or depends on the distance from a point. A kink that the flow crosses leaves an error that falls only with the substep:
+/// their number stops at <see cref="MostSubsteps"/> and <see cref="ErrorFor"/> says what is left.</para>
+/// <para>Safe to use from several threads once <see cref="Prepare"/> has been called for a time; allocates nothing but there.</para>
 /// </remarks>
 public sealed class CharacteristicMap
 {
     /// <summary>Promise on the estimated error over the whole time, relative to the domain's size.</summary>
     public const double Tolerance = 1e-10;
 
+    /// <summary>No more substeps than this are taken.</summary>
+    public const int MostSubsteps = 256;
+
     private const int Chunk = 128;
-    private const int MostSteps = 2000;
     private const int Stages = 6;
     private readonly Potential potential;
     private readonly Interval axisX;
@@ -29,6 +33,11 @@ public sealed class CharacteristicMap
     private readonly double[] valleys;
     private readonly double scale;
     private readonly PotentialForm? closedForm;
+    private readonly Domain domain;
+    private readonly PlaneStructure? structure;
+    private readonly CharacteristicMap? alongFirst;
+    private readonly CharacteristicMap? alongSecond;
+    private (double Time, int Substeps, double Error) prepared = (double.NaN, 1, 0);
 
     /// <summary>Looks at a potential on a domain.</summary>
     /// <exception cref="ArgumentException">The dimensions disagree.</exception>
@@ -39,6 +48,7 @@ public sealed class CharacteristicMap
         Require.That(potential.Dimension == domain.Dimension,
             $"The potential has {potential.Dimension} variable(s) and the domain {domain.Dimension} axis/axes; they must agree.");
         this.potential = potential;
+        this.domain = domain;
         axisX = domain.X;
         axisY = domain.Y;
         scale = Math.Max(axisX.Length, axisY?.Length ?? 0);
@@ -62,6 +72,96 @@ public sealed class CharacteristicMap
         }
 
         valleys = [.. found];
+        structure = PlaneStructure.Find(potential, domain);
+        if (structure is null)
+            return;
+        alongFirst = new CharacteristicMap(structure.First, new Domain(structure.IsRadial ? new Interval(0, structure.Reach) : axisX));
+        alongSecond = structure.Second is { } second ? new CharacteristicMap(second, new Domain(axisY!)) : null;
+    }
+
+    /// <summary>Chooses the number of substeps for a time; to be called before <see cref="Apply"/>, from one thread.</summary>
+    /// <param name="t">Mobility times time, above 0.</param>
+    public void Prepare(double t)
+    {
+        Require.Positive(t);
+        if (t == prepared.Time)
+            return;
+        if (structure is not null)
+        {
+            alongFirst!.Prepare(t);
+            alongSecond?.Prepare(t);
+            prepared = (t, 1, Math.Max(alongFirst.ErrorFor(t), alongSecond?.ErrorFor(t) ?? 0));
+            return;
+        }
+
+        if (closedForm is not null)
+        {
+            prepared = (t, 1, 0);
+            return;
+        }
+
+        var substeps = 1;
+        var error = ErrorOnLattice(t, substeps);
+        while (!(error <= Tolerance * scale) && substeps < MostSubsteps)
+        {
+            // The error falls like the number of substeps to the power −5; never more than fourfold at once.
+            var wanted = double.IsFinite(error) ? 1.05 * Math.Pow(error / (Tolerance * scale), 0.2) : 4;
+            substeps = Math.Min(MostSubsteps, (int)Math.Ceiling(substeps * Math.Clamp(wanted, 1.1, 4)));
+            error = ErrorOnLattice(t, substeps);
+        }
+
+        prepared = (t, substeps, error);
+    }
+
+    /// <summary>Estimated error of the map prepared for a time, in units of length; at most <see cref="Tolerance"/> times the domain's size where V is smooth.</summary>
+    public double ErrorFor(double t)
+    {
+        Prepare(t);
+        return prepared.Error;
+    }
+
+    // Largest difference between the results of so many substeps and of twice as many.
+    private double ErrorOnLattice(double t, int substeps)
+    {
+        var columns = axisY is null ? 1024 : 48;
+        var rows = axisY is null ? 1 : 48;
+        double[] x = new double[columns], u = new double[columns], otherU = new double[columns];
+        var y = new double[axisY is null ? 0 : columns];
+        double[] v = new double[y.Length], otherV = new double[y.Length];
+        for (var i = 0; i < columns; i++)
+            x[i] = axisX.From + (i + 0.5) / columns * axisX.Length;
+        var worst = 0.0;
+        for (var row = 0; row < rows; row++)
+        {
+            if (axisY is not null)
+                Array.Fill(y, axisY.From + (row + 0.5) / rows * axisY.Length);
+            IntegrateAll(t, substeps, x, y, u, v);
+            IntegrateAll(t, 2 * substeps, x, y, otherU, otherV);
+            for (var i = 0; i < columns; i++)
+                worst = Math.Max(worst, Math.Max(Apart(axisX, u[i], otherU[i]), axisY is null ? 0 : Apart(axisY, v[i], otherV[i])));
+        }
+
+        return worst;
+    }
+
+    private static double Apart(Interval axis, double a, double b)
+    {
+        var distance = Math.Abs(a - b);
+        return axis.Ends == AxisEnds.Periodic ? Math.Min(distance, axis.Length - distance) : distance;
+    }
+
+    private int IntegrateAll(double t, int substeps, ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> targetX, Span<double> targetY)
+    {
+        var lost = 0;
+        for (var first = 0; first < x.Length; first += Chunk)
+        {
+            var count = Math.Min(Chunk, x.Length - first);
+            var partY = axisY is null ? [] : y.Slice(first, count);
+            var destinationY = axisY is null ? [] : targetY.Slice(first, count);
+            lost += Integrate(t, substeps, x.Slice(first, count), partY, targetX.Slice(first, count), destinationY);
+        }
+
+        return lost;
     }
 
     /// <summary>Writes the point that each point is carried to.</summary>
@@ -70,8 +170,8 @@ public sealed class CharacteristicMap
     /// <param name="y">Second coordinates; empty in one dimension.</param>
     /// <param name="targetX">Receives first coordinates; may be <paramref name="x"/> itself.</param>
     /// <param name="targetY">Receives second coordinates; may be <paramref name="y"/> itself.</param>
-    /// <returns>Number of points where the tolerance was not reached: there the best point found is written.</returns>
-    /// <exception cref="ArgumentException">The lengths differ.</exception>
+    /// <returns>Number of points whose way was not finite: they stay where they were.</returns>
+    /// <exception cref="ArgumentException">The lengths differ, or the map was not prepared for this time.</exception>
     public int Apply(double t, ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> targetX, Span<double> targetY)
     {
         Require.Positive(t);
@@ -80,15 +180,15 @@ public sealed class CharacteristicMap
         Require.Length(targetY.Length, y.Length);
         if (axisY is null && ApplyForm(t, x, targetX))
             return 0;
-        var missed = 0;
-        for (var first = 0; first < x.Length; first += Chunk)
-        {
-            var count = Math.Min(Chunk, x.Length - first);
-            missed += Integrate(
-                t, x.Slice(first, count), axisY is null ? [] : y.Slice(first, count), targetX.Slice(first, count), axisY is null ? [] : targetY.Slice(first, count));
-        }
+        Require.That(t == prepared.Time, "The map was used for a time that it was not prepared for; call Prepare first.");
+        if (structure is not null)
+            return structure.Apply(new LineMap(alongFirst!, t), alongSecond is null ? null : new LineMap(alongSecond, t), x, y, targetX, targetY, domain);
+        return IntegrateAll(t, prepared.Substeps, x, y, targetX, targetY);
+    }
 
-        return missed;
+    private readonly record struct LineMap(CharacteristicMap Map, double Time) : PlaneStructure.ILineMap
+    {
+        public int Apply(ReadOnlySpan<double> x, Span<double> target) => Map.Apply(Time, x, [], target, []);
     }
 
     private bool ApplyForm(double t, ReadOnlySpan<double> x, Span<double> target)
@@ -109,10 +209,12 @@ public sealed class CharacteristicMap
         }
     }
 
+    // Returns the number of points whose way was not finite.
     [SkipLocalsInit]
-    private int Integrate(double t, ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> targetX, Span<double> targetY)
+    private int Integrate(double t, int substeps, ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> targetX, Span<double> targetY)
     {
-        Span<double> storage = stackalloc double[(4 + Stages + 1) * 2 * Chunk];
+        const int length = (4 + Stages) * 2 * Chunk;
+        var storage = AlignedScratch.Of(stackalloc double[length + AlignedScratch.Slack], length);
         var axes = axisY is null ? 1 : 2;
         // Padded to whole vectors with copies of the last point.
         var n = (x.Length + 7) & ~7;
@@ -124,54 +226,31 @@ public sealed class CharacteristicMap
         Pad(x, states[..n]);
         if (axes == 2)
             Pad(y, states.Slice(Chunk, n));
-        Slope(states, states, evaluated, wrapped, Part(slopes, 0), n, axes);
-        var done = 0.0;
-        var step = t;
-        var unfinished = 0;
-        for (var count = 0; done < t; count++)
+        var step = t / substeps;
+        for (var k = 0; k < substeps; k++)
         {
-            if (count == MostSteps)
-            {
-                unfinished = x.Length;
-                break;
-            }
-
-            step = Math.Min(step, t - done);
+            Slope(states, states, evaluated, wrapped, Part(slopes, 0), n, axes);
             for (var stage = 1; stage <= Stages; stage++)
             {
                 Combine(states, trials, slopes, Weights(stage), step, n, axes);
-                Slope(states, trials, evaluated, wrapped, Part(slopes, stage), n, axes);
+                if (stage < Stages)
+                    Slope(states, trials, evaluated, wrapped, Part(slopes, stage), n, axes);
             }
 
-            // The seventh slope is that at the new point: it serves the error estimate and the next step.
-            var error = ErrorOf(slopes, step, n, axes);
-            var most = Tolerance * scale * (step / t);
-            if (!(error <= most) && step > 1e-9 * t)
-            {
-                step *= double.IsFinite(error) ? Math.Clamp(0.9 * Math.Pow(most / error, 0.2), 0.1, 0.9) : 0.1;
-                continue;
-            }
-
-            done = step >= t - done ? t : done + step;
             Arrive(states, trials, n, axes);
-            if (valleys.Length > 0)
-                Slope(states, states, evaluated, wrapped, Part(slopes, 0), n, axes);
-            else
-                Part(slopes, Stages).CopyTo(Part(slopes, 0));
-            step *= Math.Clamp(0.9 * Math.Pow(most / Math.Max(error, 1e-300), 0.2), 0.5, 5);
         }
 
+        var lost = 0;
         for (var i = 0; i < x.Length; i++)
         {
             var finite = double.IsFinite(states[i]) && (axes == 1 || double.IsFinite(states[Chunk + i]));
-            if (!finite)
-                unfinished = Math.Min(unfinished + 1, x.Length);
+            lost += finite ? 0 : 1;
             targetX[i] = finite ? axisX.Fold(states[i]) : x[i];
             if (axes == 2)
                 targetY[i] = finite ? axisY!.Fold(states[Chunk + i]) : y[i];
         }
 
-        return unfinished;
+        return lost;
     }
 
     private static void Pad(ReadOnlySpan<double> x, Span<double> target)
@@ -182,7 +261,7 @@ public sealed class CharacteristicMap
 
     private static Span<double> Part(Span<double> slopes, int stage) => slopes.Slice(2 * Chunk * stage, 2 * Chunk);
 
-    // The pair of Dormand and Prince: rows of the tableau; the sixth row is the fifth-order result itself.
+    // Rows of the tableau; the sixth row is the result.
     private static ReadOnlySpan<double> Weights(int stage) => stage switch
     {
         1 => [1.0 / 5],
@@ -192,9 +271,6 @@ public sealed class CharacteristicMap
         5 => [9017.0 / 3168, -355.0 / 33, 46732.0 / 5247, 49.0 / 176, -5103.0 / 18656],
         _ => [35.0 / 384, 0, 500.0 / 1113, 125.0 / 192, -2187.0 / 6784, 11.0 / 84],
     };
-
-    private static ReadOnlySpan<double> ErrorWeights =>
-        [71.0 / 57600, 0, -71.0 / 16695, 71.0 / 1920, -17253.0 / 339200, 22.0 / 525, -1.0 / 40];
 
     // Slopes at points reached from states. A point beyond a valley of V is looked at just before it, so that the integrator sees a smooth
     // slope up to the moment of arrival; a state in the valley rests. Beyond a wall V need not be defined: the wall itself is looked at.
@@ -254,26 +330,6 @@ public sealed class CharacteristicMap
                     SpanKernels.AddScaled(target, -step * weights[k], Part(slopes, k).Slice(axis * Chunk, n));
             }
         }
-    }
-
-    private static double ErrorOf(Span<double> slopes, double step, int n, int axes)
-    {
-        Span<double> sum = stackalloc double[Chunk];
-        var largest = 0.0;
-        for (var axis = 0; axis < axes; axis++)
-        {
-            var part = sum[..n];
-            part.Clear();
-            for (var k = 0; k <= Stages; k++)
-            {
-                if (ErrorWeights[k] != 0)
-                    SpanKernels.AddScaled(part, ErrorWeights[k], Part(slopes, k).Slice(axis * Chunk, n));
-            }
-
-            largest = Math.Max(largest, SpanKernels.MaxAbs(part));
-        }
-
-        return step * largest;
     }
 
     // Takes the new points, holds in a valley of V whoever has just crossed it, and stops at walls.

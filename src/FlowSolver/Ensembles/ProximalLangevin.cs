@@ -13,7 +13,7 @@ namespace FlowSolver.Ensembles;
 public sealed class ProximalLangevin : RecipeSampler
 {
     /// <inheritdoc/>
-    public override SplitRecipe Recipe { get; } = SplitRecipes.ProximalThenNoise;
+    public override SplitRecipe Recipe => SplitRecipes.ProximalThenNoise;
 
     /// <inheritdoc/>
     public override SamplerTraits Traits { get; } = new(

@@ -13,7 +13,8 @@ namespace FlowSolver.Ensembles;
 /// <remarks>
 /// <para><b>Ways.</b> V quadratic, or |x − c| in one dimension: closed form. Otherwise Newton's method for y − x + t∇V(y) = 0, eight points at a
 /// time: in one dimension inside a bracket that shrinks at every step, with bisection where Newton leaves it; in two dimensions with
-/// backtracking on the objective, and along −∇ where the Hessian of the objective is not positive.</para>
+/// backtracking on the objective, and with a lifted Hessian where that of the objective is not positive. In two dimensions a V that is a sum over
+/// the axes is taken axis by axis, and one that depends on the distance from a point alone is taken along the ray, so that their kinks are exact too.</para>
 /// <para><b>Tolerance.</b> |y − x + t∇V(y)| ≤ <see cref="Tolerance"/>·scale in each coordinate, scale the domain's size (the largest of its lengths and
 /// the absolute values of its ends). With 1 + t·V″ ≥ c the error of y itself is at most that over c. At a stop (below) y is exact.</para>
 /// <para><b>Stops.</b> A point where V′ jumps up (a kink such as that of |x|) is the answer exactly when 0 lies between the two slopes of the
@@ -39,6 +40,10 @@ public sealed class ProximalMap
     private readonly double largestSlope;
     private readonly Stop[] stops;
     private readonly PotentialForm? closedForm;
+    private readonly Domain domain;
+    private readonly PlaneStructure? structure;
+    private readonly ProximalMap? alongFirst;
+    private readonly ProximalMap? alongSecond;
 
     /// <summary>Looks at a potential on a domain.</summary>
     /// <exception cref="ArgumentException">The dimensions disagree.</exception>
@@ -49,6 +54,7 @@ public sealed class ProximalMap
         Require.That(potential.Dimension == domain.Dimension,
             $"The potential has {potential.Dimension} variable(s) and the domain {domain.Dimension} axis/axes; they must agree.");
         this.potential = potential;
+        this.domain = domain;
         axisX = domain.X;
         axisY = domain.Y;
         allowed = Tolerance * Math.Max(SizeOf(axisX), axisY is null ? 0 : SizeOf(axisY));
@@ -58,6 +64,11 @@ public sealed class ProximalMap
         largestSlope = 1.5 * survey.LargestSlope;
         stops = axisY is null ? FindStops() : [];
         closedForm = axisY is null ? ClosedForms.Usable(potential, axisX) : null;
+        structure = PlaneStructure.Find(potential, domain);
+        if (structure is null)
+            return;
+        alongFirst = new ProximalMap(structure.First, new Domain(structure.IsRadial ? new Interval(0, structure.Reach) : axisX));
+        alongSecond = structure.Second is { } second ? new ProximalMap(second, new Domain(axisY!)) : null;
     }
 
     /// <summary>λ, the least eigenvalue of D²V found on the domain (sampled; kinks aside), in units of energy per length².</summary>
@@ -80,6 +91,8 @@ public sealed class ProximalMap
         Require.Length(targetX.Length, x.Length);
         Require.Length(y.Length, axisY is null ? 0 : x.Length);
         Require.Length(targetY.Length, y.Length);
+        if (structure is not null)
+            return structure.Apply(new LineMap(alongFirst!, t), alongSecond is null ? null : new LineMap(alongSecond, t), x, y, targetX, targetY, domain);
         var missed = 0;
         for (var first = 0; first < x.Length; first += Chunk)
         {
@@ -90,6 +103,11 @@ public sealed class ProximalMap
         }
 
         return missed;
+    }
+
+    private readonly record struct LineMap(ProximalMap Map, double Time) : PlaneStructure.ILineMap
+    {
+        public int Apply(ReadOnlySpan<double> x, Span<double> target) => Map.Apply(Time, x, [], target, []);
     }
 
     private static double SizeOf(Interval axis) => Math.Max(axis.Length, Math.Max(Math.Abs(axis.From), Math.Abs(axis.To)));
@@ -425,36 +443,44 @@ public sealed class ProximalMap
             var objective = Vector512.FusedMultiplyAdd(step, Load(jet.Value, i), half * Vector512.FusedMultiplyAdd(shiftX, shiftX, shiftY * shiftY));
             var forceX = Vector512.FusedMultiplyAdd(step, Load(jet.GradientX, i), shiftX);
             var forceY = Vector512.FusedMultiplyAdd(step, Load(jet.GradientY, i), shiftY);
+            // A coordinate at a wall that V pushes into is held there.
+            var heldX = (Vector512.LessThanOrEqual(trialX, fromX) & Vector512.GreaterThan(forceX, zero))
+                | (Vector512.GreaterThanOrEqual(trialX, toX) & Vector512.LessThan(forceX, zero));
+            var heldY = (Vector512.LessThanOrEqual(trialY, fromY) & Vector512.GreaterThan(forceY, zero))
+                | (Vector512.GreaterThanOrEqual(trialY, toY) & Vector512.LessThan(forceY, zero));
+            forceX = Vector512.AndNot(forceX, heldX);
+            forceY = Vector512.AndNot(forceY, heldY);
             var oldX = Load(work.ForceX, i);
             var oldY = Load(work.ForceY, i);
             var old = Load(work.Objective, i);
             // Sufficient decrease along the step really made; near the end, where the objective no longer resolves it, a halved force.
             var promised = Vector512.FusedMultiplyAdd(oldX, trialX - currentX, oldY * (trialY - currentY));
             var fallen = Vector512.LessThanOrEqual(objective, Vector512.FusedMultiplyAdd(Vector512.Create(1e-4), promised, old));
-            var calmer = Vector512.LessThanOrEqual(
-                Vector512.Max(Vector512.Abs(forceX), Vector512.Abs(forceY)), half * Vector512.Max(Vector512.Abs(oldX), Vector512.Abs(oldY)))
-                & Vector512.LessThanOrEqual(objective - old, Vector512.Create(1e-12) * Vector512.Abs(objective));
+            var oldForce = Vector512.Max(Vector512.Abs(oldX), Vector512.Abs(oldY));
+            var calmer = Vector512.LessThanOrEqual(Vector512.Max(Vector512.Abs(forceX), Vector512.Abs(forceY)), half * oldForce)
+                & Vector512.LessThanOrEqual(oldForce, Vector512.Create(1e-6 / Tolerance * allowed));
             var taken = Vector512.AndNot(fallen | calmer, settled);
 
             currentX = Vector512.ConditionalSelect(taken, trialX, currentX);
             currentY = Vector512.ConditionalSelect(taken, trialY, currentY);
-            // A coordinate at a wall that V pushes into is held there.
-            var heldX = (Vector512.LessThanOrEqual(currentX, fromX) & Vector512.GreaterThan(forceX, zero))
-                | (Vector512.GreaterThanOrEqual(currentX, toX) & Vector512.LessThan(forceX, zero));
-            var heldY = (Vector512.LessThanOrEqual(currentY, fromY) & Vector512.GreaterThan(forceY, zero))
-                | (Vector512.GreaterThanOrEqual(currentY, toY) & Vector512.LessThan(forceY, zero));
-            forceX = Vector512.AndNot(forceX, heldX);
-            forceY = Vector512.AndNot(forceY, heldY);
             var a = Vector512.FusedMultiplyAdd(step, Load(jet.HessianXX, i), one);
             var b = Vector512.AndNot(step * Load(jet.HessianXY, i), heldX | heldY);
             var c = Vector512.FusedMultiplyAdd(step, Load(jet.HessianYY, i), one);
             var determinant = a * c - b * b;
-            var newtonX = (b * forceY - c * forceX) / determinant;
-            var newtonY = (b * forceX - a * forceY) / determinant;
             var convex = Vector512.GreaterThan(a, zero) & Vector512.GreaterThan(determinant, zero);
-            // Where the objective is not convex: along −force, which is the explicit gradient step at first.
-            var aimX = Vector512.ConditionalSelect(convex, newtonX, -forceX);
-            var aimY = Vector512.ConditionalSelect(convex, newtonY, -forceY);
+            if (!Vector512.EqualsAll(convex.AsInt64(), Vector512<long>.AllBitsSet))
+            {
+                // Where the objective is not convex, its Hessian is lifted until its least eigenvalue is a hundredth: a descent direction still.
+                var middle = half * (a + c);
+                var least = middle - Vector512.Sqrt(Vector512.FusedMultiplyAdd(middle - c, middle - c, b * b));
+                var lift = Vector512.ConditionalSelect(convex, zero, Vector512.Create(0.01) - least);
+                a += lift;
+                c += lift;
+                determinant = a * c - b * b;
+            }
+
+            var aimX = (b * forceY - c * forceX) / determinant;
+            var aimY = (b * forceX - a * forceY) / determinant;
             var directionX = Vector512.ConditionalSelect(taken, aimX, Load(work.DirectionX, i));
             var directionY = Vector512.ConditionalSelect(taken, aimY, Load(work.DirectionY, i));
             var near = taken & Vector512.LessThanOrEqual(Vector512.Abs(forceX), small) & Vector512.LessThanOrEqual(Vector512.Abs(forceY), small);

@@ -81,24 +81,37 @@ internal sealed class RecipeRun : TiledRun
         {
             times[p] = Problem.Mobility * parts[p].Fraction * step;
             deviations[p] = Math.Sqrt(2 * Problem.Temperature * times[p]);
+            if (parts[p].Map == TransportMap.Characteristic)
+                characteristic!.Prepare(times[p]);
         }
 
         var outcomes = RunTiles();
         var (failure, warning) = watch.Judge(outcomes, StepsTaken + 1, step, Problem.Mobility * longestExplicit * step, X, Y);
-        return new EnsembleReport(failure, warning ?? UniquenessWarning(step));
+        return new EnsembleReport(failure, warning ?? StepWarning(step));
     }
 
-    private string? UniquenessWarning(double step)
+    // Said once for each length of step.
+    private string? StepWarning(double step)
     {
-        if (proximal is null || step == warnedStep)
+        if (step == warnedStep)
             return null;
         warnedStep = step;
-        var longest = 0.0;
+        double longestProximal = 0, flowError = 0;
         for (var p = 0; p < parts.Length; p++)
-            longest = parts[p].Map == TransportMap.Proximal ? Math.Max(longest, times[p]) : longest;
-        return proximal.IsUnique(longest)
+        {
+            longestProximal = parts[p].Map == TransportMap.Proximal ? Math.Max(longestProximal, times[p]) : longestProximal;
+            flowError = parts[p].Map == TransportMap.Characteristic ? Math.Max(flowError, characteristic!.ErrorFor(times[p])) : flowError;
+        }
+
+        if (proximal is not null && !proximal.IsUnique(longestProximal))
+        {
+            return FormattableString.Invariant(
+                $"The proximal step of {longestProximal:g4} is too long for a unique minimiser: times the least curvature of V, {proximal.LeastCurvature:g4}, it must stay above -1. The minimiser found may not be the lowest.");
+        }
+
+        return flowError <= 1e-6 * Problem.Domain.X.Length
             ? null
-            : FormattableString.Invariant($"The proximal step of {longest:g4} is too long for a unique minimiser: times the least curvature of V, {proximal.LeastCurvature:g4}, it must stay above -1. The minimiser found may not be the lowest.");
+            : FormattableString.Invariant($"The flow of the gradient over a step is known to {flowError:g2} only: V has kinks that it crosses, or is too steep for {CharacteristicMap.MostSubsteps} substeps.");
     }
 
     [SkipLocalsInit]

@@ -39,6 +39,9 @@ internal abstract class TiledRun : EnsembleRun
 
     protected ulong Seed { get; }
 
+    /// <summary>Number of the step in the streams of random numbers.</summary>
+    protected virtual uint StreamStep => checked((uint)StepsTaken);
+
     protected AxisFold FoldX { get; }
 
     protected AxisFold FoldY { get; }
@@ -140,6 +143,33 @@ internal abstract class TiledRun : EnsembleRun
         fold.FoldInPlace(x);
     }
 
+    /// <summary>One explicit step of a tile: x ← fold(x − t(∇V + bias) + deviation·ξ).</summary>
+    [SkipLocalsInit]
+    protected void ExplicitStep(
+        double time, double biasX, double biasY, double deviation, int first, int count, Span<double> x, Span<double> y, bool compare, ref BlockOutcome outcome)
+    {
+        var storage = AlignedScratch.Of(stackalloc double[2 * TileLength + AlignedScratch.Slack], 2 * TileLength);
+        var gradientX = storage[..x.Length];
+        var gradientY = IsPlane ? storage.Slice(TileLength, x.Length) : [];
+        Problem.Potential.Gradient(x, y, gradientX, gradientY);
+        Shift(gradientX, biasX);
+        Shift(gradientY, biasY);
+        if (compare)
+            CompareEnergies(time, count, x, y, gradientX, gradientY, ref outcome);
+        Move(FoldX, time, gradientX, deviation, StreamPurpose.Noise, x, first, count, ref outcome);
+        if (IsPlane)
+            Move(FoldY, time, gradientY, deviation, StreamPurpose.Noise + 1, y, first, count, ref outcome);
+    }
+
+    private static void Shift(Span<double> values, double constant)
+    {
+        if (constant == 0)
+            return;
+        ref var source = ref MemoryMarshal.GetReference(values);
+        for (nuint i = 0; i < (nuint)values.Length; i += 8)
+            (Vector512.LoadUnsafe(ref source, i) + Vector512.Create(constant)).StoreUnsafe(ref source, i);
+    }
+
     /// <summary>x ← fold(x + deviation·ξ), ξ the standard normal numbers of this step.</summary>
     protected void AddNoise(in AxisFold fold, double deviation, uint purpose, int first, Span<double> x)
     {
@@ -149,7 +179,7 @@ internal abstract class TiledRun : EnsembleRun
 
     /// <summary>Standard normal numbers of this step for the walkers from <paramref name="first"/> on.</summary>
     protected void DrawNormals(uint purpose, int first, Span<double> target)
-        => new NormalDraws(Seed, purpose, (uint)StepsTaken).Fill((ulong)first, target);
+        => new NormalDraws(Seed, purpose, StreamStep).Fill((ulong)first, target);
 
     // Hands a tile's normal numbers to what uses them in the loop that makes them: a third of the time of writing and reading them is saved.
     [SkipLocalsInit]
@@ -158,7 +188,7 @@ internal abstract class TiledRun : EnsembleRun
     {
         var words = AlignedScratch.Of(stackalloc ulong[TileLength / 2 + AlignedScratch.Slack], TileLength / 2);
         ref var bits = ref MemoryMarshal.GetReference(words);
-        var key = new StreamKey(Seed, purpose, (uint)StepsTaken);
+        var key = new StreamKey(Seed, purpose, StreamStep);
         Philox.Fill((ulong)first / 4, key.HighHalf, key.Seed, ref bits, (length / 2 + 15) & ~15);
         NormalPairs.Run(ref bits, length / 2, deviation, sink);
     }
@@ -185,8 +215,8 @@ internal abstract class TiledRun : EnsembleRun
         }
     }
 
-    // The largest |value|, NaN when there is any: without signs, the bits of doubles are in the order of their values, with NaN at the top.
-    private static double LargestMagnitude(ReadOnlySpan<double> values)
+    /// <summary>The largest |value|, NaN when there is any: without signs, the bits of doubles are in the order of their values, with NaN at the top.</summary>
+    protected static double LargestMagnitude(ReadOnlySpan<double> values)
     {
         ref var source = ref MemoryMarshal.GetReference(values);
         var magnitude = Vector512.Create(long.MaxValue);

@@ -13,7 +13,7 @@ namespace FlowSolver.Ensembles;
 public sealed class UnadjustedLangevin : RecipeSampler
 {
     /// <inheritdoc/>
-    public override SplitRecipe Recipe { get; } = SplitRecipes.GradientThenNoise;
+    public override SplitRecipe Recipe => SplitRecipes.GradientThenNoise;
 
     /// <inheritdoc/>
     public override SamplerTraits Traits { get; } = new(

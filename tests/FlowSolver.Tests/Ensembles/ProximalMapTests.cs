@@ -248,6 +248,56 @@ public class ProximalMapTests
         }
     }
 
+    [Fact]
+    public void Apply_PlaneWithAxisKinks_LandsExactlyOnThem()
+    {
+        // V = |x| + 0.5·|y − 0.25| + x²/2 + y²: sums over the axes, both proximal points in closed form.
+        var map = new ProximalMap(FormulaPotential.Parse("abs(x) + 0.5*abs(y-0.25) + x^2/2 + y^2", 2), new Domain(Wide, Wide));
+        const double t = 0.3;
+        var (x, y) = Lattice(61);
+        double[] u = new double[x.Length], v = new double[x.Length];
+        Assert.Equal(0, map.Apply(t, x, y, u, v));
+        int onX = 0, onY = 0;
+        for (var i = 0; i < x.Length; i++)
+        {
+            // Away from the kinks (x ∓ t)/(1 + t); at a kink the interval of the two slopes holds 0.
+            Assert.Equal(Math.Sign(x[i]) * Math.Max(0, Math.Abs(x[i]) - t) / (1 + t), u[i], 11);
+            var below = (y[i] + 0.5 * t) / (1 + 2 * t);
+            var above = (y[i] - 0.5 * t) / (1 + 2 * t);
+            Assert.Equal(above > 0.25 ? above : below < 0.25 ? below : 0.25, v[i], 11);
+            onX += u[i] == 0 ? 1 : 0;
+            onY += v[i] == 0.25 ? 1 : 0;
+        }
+
+        Assert.InRange(onX, 100, 61 * 61 / 4);
+        Assert.InRange(onY, 61, 61 * 61 / 4);
+    }
+
+    [Theory]
+    [InlineData("sqrt(x^2+y^2)", 0, 0)]
+    [InlineData("2*sqrt((x-0.5)^2+(y+1)^2) + ((x-0.5)^2+(y+1)^2)/2", 0.5, -1)]
+    public void Apply_PlaneWithAKinkAtAPoint_ShrinksAlongTheRay(string formula, double centerX, double centerY)
+    {
+        var (slope, curvature) = centerX == 0 ? (1.0, 0.0) : (2.0, 1.0);
+        var map = new ProximalMap(FormulaPotential.Parse(formula, 2), new Domain(Wide, Wide));
+        const double t = 0.4;
+        var (x, y) = Lattice(41);
+        double[] u = new double[x.Length], v = new double[x.Length];
+        Assert.Equal(0, map.Apply(t, x, y, u, v));
+        var atPoint = 0;
+        for (var i = 0; i < x.Length; i++)
+        {
+            var (dx, dy) = (x[i] - centerX, y[i] - centerY);
+            var r = Math.Sqrt(dx * dx + dy * dy);
+            var share = r > 0 ? Math.Max(0, r - t * slope) / (1 + t * curvature) / r : 0;
+            Assert.Equal(centerX + share * dx, u[i], 10);
+            Assert.Equal(centerY + share * dy, v[i], 10);
+            atPoint += u[i] == centerX && v[i] == centerY ? 1 : 0;
+        }
+
+        Assert.InRange(atPoint, 5, 60);
+    }
+
     private static (double[] X, double[] Y) Lattice(int n, double half = 4)
     {
         double[] x = new double[n * n], y = new double[n * n];

@@ -7,7 +7,7 @@ namespace FlowSolver.Tests.Ensembles;
 
 /// <summary>
 /// What every sampler of the catalogue must show. Statistical bounds are in standard errors under fixed seeds.
-/// Mutations tried: tiles drawing their noise from number 0 instead of the walker's own; Advance_BoxWithoutForce_StaysUniform failed. The fold left out of AddNoise; Advance_BoxWithoutForce_StaysUniform failed.
+/// Mutations tried: tiles drawing their noise from number 0 instead of the walker's own; Advance_BoxWithoutForce_StaysUniform failed. The fold left out of AxisFold.FoldInPlace; the same failed for all samplers but those that refuse.
 /// </summary>
 public class SamplerConformanceTests
 {
