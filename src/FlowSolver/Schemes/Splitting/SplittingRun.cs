@@ -75,6 +75,19 @@ internal sealed class SplittingRun : FlowRun
         return report;
     }
 
+    /// <summary>Goes on from another density on the problem's grid, as after a finished step; time and count go on.</summary>
+    internal void Replace(ReadOnlySpan<double> values)
+    {
+        Require.Length(values.Length, Problem.Grid.CellCount);
+        pendingLegs.Clear();
+        pendingNoise = 0;
+        if (finerX == 1 && finerY == 1)
+            values.CopyTo(density);
+        else
+            density = Refinement.Refine(values.ToArray(), Problem.Grid.X, Problem.Grid.Y, finerX, finerY);
+        Normalise(density);
+    }
+
     /// <inheritdoc/>
     public override void WriteDensity(Span<double> destination)
     {
@@ -177,7 +190,7 @@ internal sealed class SplittingRun : FlowRun
         var wanted = pendingLegs.ToArray();
         var maps = new MapsOnGrid(Problem.Problem.Potential, separated, axisX, axisY, wanted);
         news ??= maps.Warning;
-        var made = maps.PushForward(Team);
+        var made = maps.PushForward(density, Team);
         pushes.Add((wanted, made));
         return made;
     }

@@ -166,6 +166,8 @@ internal sealed class TransportAndNoise
 /// <summary>The maps of one or more legs on a grid: by axes where the landscape is a sum of a function of x and one of y, else on the plane. Immutable.</summary>
 internal sealed class MapsOnGrid
 {
+    // Less folded mass than this is left out of a pull-back, which sees one preimage only.
+    private const double FoldedMass = 1e-6;
     private readonly ChainOnLine? alongX;
     private readonly ChainOnLine? alongY;
     private readonly ChainOnPlane? onPlane;
@@ -238,10 +240,12 @@ internal sealed class MapsOnGrid
         });
     }
 
-    /// <summary>Makes what carries a density through the maps without noise.</summary>
-    public Action<double[], double[], double[]> PushForward(WorkerTeam team)
+    /// <summary>Makes what carries a density through the maps without noise: source, work array of the same length, destination.</summary>
+    /// <param name="density">The density now: folds matter where there is mass.</param>
+    /// <param name="team">Threads.</param>
+    public Action<double[], double[], double[]> PushForward(double[] density, WorkerTeam team)
     {
-        if (onPlane is not null && onPlane.IsOneToOne)
+        if (onPlane is not null && onPlane.FoldedShare(density, X, Y!) < FoldedMass)
             return new PullBackOnPlane(onPlane, X, Y!, team).Apply;
         if (onPlane is not null)
         {

@@ -96,6 +96,7 @@ internal sealed class ChainOnLine
 internal sealed class ChainOnPlane
 {
     private readonly TransportOnPlane[] maps;
+    private readonly Potential potential;
     private readonly Interval intervalX;
     private readonly Interval intervalY;
 
@@ -103,14 +104,45 @@ internal sealed class ChainOnPlane
     {
         (intervalX, intervalY) = (axisX.Interval, axisY.Interval);
         maps = [.. legs.Select(leg => TransportOnPlane.Create(leg.Map, potential, leg.Length, intervalX, intervalY))];
-        Examine(potential);
+        this.potential = potential;
+        Examine();
     }
 
     /// <summary>A sentence for the reader, or null.</summary>
     public string? Warning { get; private set; }
 
-    /// <summary>Whether every map is one-to-one on the domain.</summary>
-    public bool IsOneToOne => Warning is null;
+    /// <summary>Share of a density's mass that stands where a map is not one-to-one.</summary>
+    /// <param name="density">Densities, x fastest.</param>
+    /// <param name="axisX">First axis.</param>
+    /// <param name="axisY">Second axis.</param>
+    public double FoldedShare(double[] density, Axis axisX, Axis axisY)
+    {
+        if (Warning is null)
+            return 0;
+        var (folded, total) = (0.0, 0.0);
+        var count = axisX.Cells;
+        var (x, y) = (axisX.Centers(), new double[count]);
+        var parts = new double[6 * count];
+        for (var row = 0; row < axisY.Cells; row++)
+        {
+            Array.Fill(y, axisY.Center(row));
+            Derivatives(x, y, parts);
+            for (var i = 0; i < count; i++)
+            {
+                var mass = density[row * count + i];
+                total += mass;
+                foreach (var map in maps)
+                {
+                    if (map.IsOneToOne(parts[3 * count + i], parts[4 * count + i], parts[5 * count + i]))
+                        continue;
+                    folded += mass;
+                    break;
+                }
+            }
+        }
+
+        return folded / total;
+    }
 
     /// <summary>Writes the images; the last map may lead outside the domain. At most <see cref="TransportOnPlane.Chunk"/> points.</summary>
     public void Map(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> mappedX, Span<double> mappedY)
@@ -149,7 +181,17 @@ internal sealed class ChainOnPlane
                 : position >= interval.From - 1e-12 * interval.Length && position <= interval.To + 1e-12 * interval.Length ? position : double.NaN;
     }
 
-    private void Examine(Potential potential)
+    private void Derivatives(ReadOnlySpan<double> x, ReadOnlySpan<double> y, double[] parts) => potential.Jet(x, y, new PotentialJet
+    {
+        Value = parts.AsSpan(0, x.Length),
+        GradientX = parts.AsSpan(x.Length, x.Length),
+        GradientY = parts.AsSpan(2 * x.Length, x.Length),
+        HessianXX = parts.AsSpan(3 * x.Length, x.Length),
+        HessianXY = parts.AsSpan(4 * x.Length, x.Length),
+        HessianYY = parts.AsSpan(5 * x.Length, x.Length),
+    });
+
+    private void Examine()
     {
         const int side = 128;
         Span<double> x = stackalloc double[side];
@@ -159,15 +201,7 @@ internal sealed class ChainOnPlane
         {
             for (var i = 0; i < side; i++)
                 (x[i], y[i]) = (intervalX.From + intervalX.Length * (i + 0.5) / side, intervalY.From + intervalY.Length * (row + 0.5) / side);
-            potential.Jet(x, y, new PotentialJet
-            {
-                Value = parts.AsSpan(0, side),
-                GradientX = parts.AsSpan(side, side),
-                GradientY = parts.AsSpan(2 * side, side),
-                HessianXX = parts.AsSpan(3 * side, side),
-                HessianXY = parts.AsSpan(4 * side, side),
-                HessianYY = parts.AsSpan(5 * side, side),
-            });
+            Derivatives(x, y, parts);
             for (var i = 0; i < side; i++)
             {
                 foreach (var map in maps)
