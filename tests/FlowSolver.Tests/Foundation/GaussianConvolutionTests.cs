@@ -104,7 +104,7 @@ public class GaussianConvolutionTests
             Assert.Equal(1, found[100 + n] / (Math.Exp(-0.5 * n * n / 64.0) / Math.Sqrt(2 * Math.PI * 64)), 1e-12);
     }
 
-    /// <summary>In place, any team, and once warm without allocation. Mutation tried: one work array lent to all threads at once.</summary>
+    /// <summary>In place, any team, and once warm without allocation. Mutation tried: a work array made anew for each strip.</summary>
     [Fact]
     public void Apply_AnyTeam_GivesTheSameBytesAndAllocatesNothing()
     {
