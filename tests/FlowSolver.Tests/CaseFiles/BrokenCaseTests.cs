@@ -4,7 +4,7 @@ using FlowSolver.Foundation;
 namespace FlowSolver.Tests.CaseFiles;
 
 /// <summary>
-/// Every fault of a case file: its sentence, line and key. Mutation tried: the check of unknown keys left out; seven rows failed. Mutation tried: the
+/// Every fault of a case file: its sentence, line and key. Mutation tried: the fault for an unknown key left out; eight rows failed. Mutation tried: the
 /// line taken from the table instead of the key; most rows failed.
 /// </summary>
 public class BrokenCaseTests

@@ -10,7 +10,7 @@ namespace FlowSolver.Tests.Reporting;
 
 /// <summary>
 /// Files of samples, right and broken. Mutation tried: byte order of big-endian arrays left as it is; the round trip failed. Mutation tried: the row
-/// counted from 0; every row of the tables of broken files that names one failed.
+/// counted from 0; the broken files of which a row is named failed.
 /// </summary>
 public sealed class SamplesReaderTests : IDisposable
 {
