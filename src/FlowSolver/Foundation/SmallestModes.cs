@@ -1,5 +1,4 @@
 using System.Collections.Concurrent;
-using System.Runtime.InteropServices;
 using System.Runtime.Intrinsics;
 
 namespace FlowSolver.Foundation;

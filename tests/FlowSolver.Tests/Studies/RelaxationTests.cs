@@ -81,7 +81,12 @@ public class RelaxationTests
         Assert.NotNull(result.Committor);
         var committor = result.Committor!;
         for (var cell = 0; cell < committor.Length; cell++)
-            Assert.Equal(1, committor[cell] + committor[committor.Length - 1 - cell], 1e-6);
+        {
+            // The error is small in energy, which counts for nothing where there is no mass.
+            if (problem.Equilibrium.Values[cell] > 1e-12)
+                Assert.Equal(1, committor[cell] + committor[committor.Length - 1 - cell], 1e-8);
+        }
+
         // The start has shares in all modes of one kind; at late times the slowest one alone is left.
         Assert.Equal(8, result.Decay.Count);
         Assert.Equal(1, result.Decay[^1].Measured / result.Decay[^1].Predicted, 1e-6);
