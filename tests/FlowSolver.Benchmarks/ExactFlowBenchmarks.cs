@@ -45,7 +45,7 @@ public class ExactFlowBenchmarks
     [Benchmark]
     public StepReport Plane512() => plane.Advance(0.01);
 
-    private static GridProblem PlaneProblem(int cells)
+    internal static GridProblem PlaneProblem(int cells)
     {
         var interval = new Interval(-2, 2);
         return new GridProblem(

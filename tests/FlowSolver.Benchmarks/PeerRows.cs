@@ -9,6 +9,7 @@ internal static class PeerRows
     public static IReadOnlyList<PeerRow> Peers { get; } =
     [
         ExactFlowBenchmarks.Peer,
+        RelaxationBenchmarks.Peer,
         GaussianBenchmarks.Peer,
         JkoPlaneBenchmarks.Middle,
         JkoPlaneBenchmarks.Large,
