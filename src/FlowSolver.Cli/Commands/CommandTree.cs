@@ -18,6 +18,8 @@ internal static class CommandTree
             AuditCommand.Create(host),
             ConvergeCommand.Create(host),
             GatherCommand.Create(host),
+            RelaxCommand.Create(host),
+            SuggestCommand.Create(host),
             NewCommand.Create(host),
             ReferenceCommand.Create(host),
         };
