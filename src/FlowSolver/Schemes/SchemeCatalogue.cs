@@ -11,6 +11,8 @@ public static class SchemeCatalogue
     [
         new ExactFlowScheme(),
         new JkoScheme(),
+        new JkoBdf2Scheme(),
+        new JkoMidpointScheme(),
         SplittingScheme.Proximal,
         SplittingScheme.Gradient,
         SplittingScheme.StrangNoiseFlowNoise,
