@@ -128,6 +128,7 @@ public sealed class DecreasingStepLangevin : Sampler
         {
             if (disposing)
                 inner.Dispose();
+            base.Dispose(disposing);
         }
     }
 }

@@ -167,6 +167,7 @@ public sealed class NoisyGradientLangevin : Sampler
         {
             if (disposing)
                 inner?.Dispose();
+            base.Dispose(disposing);
         }
     }
 }

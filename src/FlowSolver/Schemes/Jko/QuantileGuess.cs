@@ -1,6 +1,5 @@
 using FlowSolver.Foundation;
 using FlowSolver.Grids;
-using FlowSolver.Problems;
 using FlowSolver.Transport;
 
 namespace FlowSolver.Schemes.Jko;
