@@ -41,7 +41,7 @@ public class RelaxationBenchmarks
         // Setting up the rates counts as our work; the peer is handed its matrix.
         return PeerComparison.Time(1, () =>
         {
-            var found = Relaxation.FindModes(new Generator(problem, team), Modes, 1e-6, team);
+            var found = Relaxation.FindModes(new Generator(problem, team), Modes, 1e-5, team);
             folder.Write("ours", found.Rates);
         });
     }

@@ -222,27 +222,37 @@ internal sealed class NetworkCoarsening
     /// <summary>fine ← interpolated coarse, or added to it.</summary>
     public void Interpolate(double[] coarse, double[] target, bool add)
     {
+        var keep = add ? 1.0 : 0.0;
         for (var j = 0; j < fine.Ny; j++)
         {
-            var (low, high) = (CoarseY(j) * coarseNx, Wrapped(CoarseY(j) + 1, coarseNy) * coarseNx);
             var at = j * fine.Nx;
-            for (var i = 0; i < fine.Nx; i++)
+            var low = coarse.AsSpan(CoarseY(j) * coarseNx, coarseNx);
+            var high = coarse.AsSpan(Wrapped(CoarseY(j) + 1, coarseNy) * coarseNx, coarseNx);
+            var row = target.AsSpan(at, fine.Nx);
+            var s0 = shares[0].AsSpan(at, fine.Nx);
+            var s1 = shares[1].AsSpan(at, fine.Nx);
+            var s2 = shares[2].AsSpan(at, fine.Nx);
+            var s3 = shares[3].AsSpan(at, fine.Nx);
+            var between = !KeptY(j);
+            if (!halvesX)
             {
-                var left = CoarseX(i);
-                double value;
-                if (KeptX(i))
-                {
-                    value = KeptY(j) ? coarse[low + left] : shares[0][at + i] * coarse[low + left] + shares[2][at + i] * coarse[high + left];
-                }
-                else
-                {
-                    var right = left == coarseNx - 1 ? 0 : left + 1;
-                    value = shares[0][at + i] * coarse[low + left] + shares[1][at + i] * coarse[low + right];
-                    if (!KeptY(j))
-                        value += shares[2][at + i] * coarse[high + left] + shares[3][at + i] * coarse[high + right];
-                }
+                for (var i = 0; i < row.Length; i++)
+                    row[i] = keep * row[i] + (between ? s0[i] * low[i] + s2[i] * high[i] : low[i]);
+                continue;
+            }
 
-                target[at + i] = add ? target[at + i] + value : value;
+            for (var left = 0; left < coarseNx; left++)
+            {
+                var i = 2 * left;
+                var (here, above) = (low[left], high[left]);
+                row[i] = keep * row[i] + (between ? s0[i] * here + s2[i] * above : here);
+                if (++i >= row.Length)
+                    break;
+                var right = left == coarseNx - 1 ? 0 : left + 1;
+                var value = s0[i] * here + s1[i] * low[right];
+                if (between)
+                    value += s2[i] * above + s3[i] * high[right];
+                row[i] = keep * row[i] + value;
             }
         }
     }
@@ -253,27 +263,42 @@ internal sealed class NetworkCoarsening
         Array.Clear(coarse);
         for (var j = 0; j < fine.Ny; j++)
         {
-            var (low, high) = (CoarseY(j) * coarseNx, Wrapped(CoarseY(j) + 1, coarseNy) * coarseNx);
             var at = j * fine.Nx;
-            for (var i = 0; i < fine.Nx; i++)
+            var low = coarse.AsSpan(CoarseY(j) * coarseNx, coarseNx);
+            var high = coarse.AsSpan(Wrapped(CoarseY(j) + 1, coarseNy) * coarseNx, coarseNx);
+            var row = source.AsSpan(at, fine.Nx);
+            var s0 = shares[0].AsSpan(at, fine.Nx);
+            var s1 = shares[1].AsSpan(at, fine.Nx);
+            var s2 = shares[2].AsSpan(at, fine.Nx);
+            var s3 = shares[3].AsSpan(at, fine.Nx);
+            var between = !KeptY(j);
+            if (!halvesX)
             {
-                var value = source[at + i];
-                var left = CoarseX(i);
-                if (KeptX(i) && KeptY(j))
+                for (var i = 0; i < row.Length; i++)
                 {
-                    coarse[low + left] += value;
-                    continue;
+                    low[i] += between ? s0[i] * row[i] : row[i];
+                    if (between)
+                        high[i] += s2[i] * row[i];
                 }
 
-                coarse[low + left] += shares[0][at + i] * value;
-                if (!KeptY(j))
-                    coarse[high + left] += shares[2][at + i] * value;
-                if (KeptX(i))
-                    continue;
+                continue;
+            }
+
+            for (var left = 0; left < coarseNx; left++)
+            {
+                var i = 2 * left;
+                low[left] += between ? s0[i] * row[i] : row[i];
+                if (between)
+                    high[left] += s2[i] * row[i];
+                if (++i >= row.Length)
+                    break;
                 var right = left == coarseNx - 1 ? 0 : left + 1;
-                coarse[low + right] += shares[1][at + i] * value;
-                if (!KeptY(j))
-                    coarse[high + right] += shares[3][at + i] * value;
+                low[left] += s0[i] * row[i];
+                low[right] += s1[i] * row[i];
+                if (!between)
+                    continue;
+                high[left] += s2[i] * row[i];
+                high[right] += s3[i] * row[i];
             }
         }
     }

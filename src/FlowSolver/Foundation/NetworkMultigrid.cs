@@ -151,9 +151,9 @@ public sealed class NetworkMultigrid
         for (var j = 0; j < network.Ny; j++)
         {
             network.ApplyRow(u, j, ku);
-            var at = j * nx;
-            for (var i = 0; i < nx; i++)
-                residual[at + i] = f[at + i] - ku[i];
+            var target = residual.AsSpan(j * nx, nx);
+            f.AsSpan(j * nx, nx).CopyTo(target);
+            SpanKernels.AddScaled(target, -1, ku);
         }
     }
 

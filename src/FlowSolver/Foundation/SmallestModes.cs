@@ -1,4 +1,5 @@
 using System.Collections.Concurrent;
+using System.Runtime.InteropServices;
 using System.Runtime.Intrinsics;
 
 namespace FlowSolver.Foundation;
@@ -193,12 +194,24 @@ public sealed class SmallestModes
             var (u, r) = (modes[k], searches[k]);
             network.Apply(u, r);
             var mass = network.Mass;
-            var square = 0.0;
-            for (var i = 0; i < r.Length; i++)
+            var rate = Vector512.Create(rates[k]);
+            var squares = Vector512<double>.Zero;
+            // A weight of 0 leaves nothing to divide by; the tiniest number stands in for it.
+            var tiny = Vector512.Create(1e-300);
+            var i = 0;
+            for (; i + 8 <= r.Length; i += 8)
+            {
+                var m = Vector512.Create<double>(mass.AsSpan(i, 8));
+                var rest = Vector512.Create<double>(r.AsSpan(i, 8)) - rate * m * Vector512.Create<double>(u.AsSpan(i, 8));
+                rest.CopyTo(r.AsSpan(i, 8));
+                squares += rest * (rest / Vector512.Max(m, tiny));
+            }
+
+            var square = Sum(squares);
+            for (; i < r.Length; i++)
             {
                 r[i] -= rates[k] * mass[i] * u[i];
-                if (mass[i] > 0)
-                    square += r[i] * (r[i] / mass[i]);
+                square += r[i] * (r[i] / Math.Max(mass[i], 1e-300));
             }
 
             residuals[k] = Math.Sqrt(square);
@@ -217,7 +230,10 @@ public sealed class SmallestModes
             if (!floating)
                 return;
             var mean = SpanKernels.Dot(network.Mass, values) / total;
-            for (var i = 0; i < values.Length; i++)
+            var vectors = MemoryMarshal.Cast<double, Vector512<double>>(values.AsSpan());
+            for (var i = 0; i < vectors.Length; i++)
+                vectors[i] -= Vector512.Create(mean);
+            for (var i = 8 * vectors.Length; i < values.Length; i++)
                 values[i] -= mean;
         }
 
@@ -362,8 +378,7 @@ public sealed class SmallestModes
                     for (var k = 0; k < size; k++)
                     {
                         network.ApplyRow(columns[k], row, applied.AsSpan(k * network.Nx, network.Nx));
-                        for (var i = 0; i < network.Nx; i++)
-                            weighted[k * network.Nx + i] = network.Mass[from + i] * columns[k][from + i];
+                        Multiply(network.Mass.AsSpan(from, network.Nx), columns[k].AsSpan(from, network.Nx), weighted.AsSpan(k * network.Nx, network.Nx));
                     }
 
                     for (var at = 0; at < network.Nx; at += Chunk)
@@ -436,6 +451,15 @@ public sealed class SmallestModes
                     sums[size * size + (a + 1) * size + b] += sumMv;
                 }
             }
+        }
+
+        private static void Multiply(ReadOnlySpan<double> a, ReadOnlySpan<double> b, Span<double> product)
+        {
+            var i = 0;
+            for (; i + 8 <= product.Length; i += 8)
+                (Vector512.Create(a.Slice(i, 8)) * Vector512.Create(b.Slice(i, 8))).CopyTo(product.Slice(i, 8));
+            for (; i < product.Length; i++)
+                product[i] = a[i] * b[i];
         }
 
         private static double Sum(Vector512<double> v)

@@ -39,7 +39,7 @@ public sealed record RelaxationOptions
     public int Modes { get; init; } = 6;
 
     /// <summary>Bound on the residual of a mode relative to √(rate · last rate); the share of the rate that is wrong is about its square.</summary>
-    public double Tolerance { get; init; } = 1e-6;
+    public double Tolerance { get; init; } = 1e-5;
 
     /// <summary>Largest number of wells between which passage times are computed, deepest first.</summary>
     public int MostWells { get; init; } = 4;
