@@ -6,8 +6,8 @@ using FlowSolver.Tests.Support;
 namespace FlowSolver.Tests.Grids;
 
 /// <summary>
-/// The bicubic spline: exact where it should be, fourth order elsewhere. Mutation tried: 4 in place of 5 at the ends of the elimination; the even
-/// case lost two orders. The closing vector of circles left out; the periodic case failed.
+/// The bicubic spline: exact where it should be, fourth order elsewhere. Mutation tried: 4 in place of 5 at the end of the elimination at a wall;
+/// the error no longer fell with the cells.
 /// </summary>
 public class PlaneSplineTests
 {

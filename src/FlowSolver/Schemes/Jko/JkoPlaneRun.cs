@@ -119,7 +119,7 @@ internal sealed class JkoPlaneRun : FlowRun
         if (movement <= 1e-13)
             return new StepReport(products, 0, 0, 0);
         var tolerance = Math.Clamp(1e-5 * movement, 1e-14, Tolerance);
-        best = default;
+        best = (Way.None, 0, new PlaneProof(double.NaN, 0, 0, 0));
         bestGap = double.PositiveInfinity;
         SolveDirectly(step, movement, tolerance, ref products);
         if (!(bestGap <= GoodGap))
