@@ -1,6 +1,7 @@
 using FlowSolver.Reporting.Archives;
 using FlowSolver.Reporting.Figures;
 using FlowSolver.Reporting.Page;
+using FlowSolver.Reporting.Reports;
 using FlowSolver.Reporting.Tables;
 using FlowSolver.Studies;
 
@@ -48,6 +49,8 @@ public static class RunWriter
                 files.Add(TableWriter.WriteCsv(table, directory));
             }
 
+            if (result.Bounds.Count > 0)
+                files.Add(TableWriter.WriteCsv(BoundsReport.Rows(result, labels), directory));
             if (result.Grid.Dimension == 1)
                 files.Add(RunTables.WriteDensityCsv(result, directory, cancellation));
             files.Add(DensityArchive.Write(result, directory, cancellation));

@@ -46,6 +46,7 @@ internal static class RunCommand
             Samplers = [.. read.Samplers.Select(name => SamplerCatalogue.Find(name)!)],
             Walkers = read.Walkers,
             Seed = seed ?? read.Seed,
+            DrawsBounds = true,
         };
         ComparisonResult result;
         IReadOnlyList<TransportPicture> maps;

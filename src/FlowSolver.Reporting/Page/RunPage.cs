@@ -1,6 +1,7 @@
 using System.Globalization;
 using FlowSolver.Problems;
 using FlowSolver.Reporting.Figures;
+using FlowSolver.Reporting.Reports;
 using FlowSolver.Reporting.Tables;
 using FlowSolver.Studies;
 
@@ -39,6 +40,7 @@ public static class RunPage
         Chart("free-energy");
         if (Certificate(result, labels, style ?? FigureStyle.Default) is { } certificate)
             sections.Add(certificate);
+        sections.AddRange(BoundsReport.Sections(result, labels, style ?? FigureStyle.Default));
         var remarks = result.Remarks.Select(remark => (Prefixed(remark, labels), remark.IsFailure))
             .Concat(provenance.Warnings.Concat(writingProblems ?? []).Select(text => (text, false))).ToList();
         sections.Add(new RemarksSection("Warnings", remarks.Count == 0 ? "None." : "", remarks));

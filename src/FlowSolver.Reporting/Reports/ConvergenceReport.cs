@@ -50,7 +50,7 @@ public static class ConvergenceReport
             new TableSection("Orders", "Fitted over the levels above the floor, beside the order that the method promises on smooth problems.", fits),
         };
         if (figure is not null)
-            sections.Add(new ChartSection(figure.Title, figure.Caption, (LinePanel)figure.Panels[0]));
+            sections.Add(new PictureSection(figure));
         sections.Add(new TableSection("Every method on every level", "The rows of orders.csv. " + result.Reference, orders));
         sections.AddRange(ClosingSections.Of(provenance, result.Remarks.Select(remark => ((remark.Method is null ? "" : remark.Method + ": ") + remark.Text, remark.IsFailure)),
             FloorSentence(result, labels)));

@@ -114,7 +114,7 @@ public static class RelaxReport
             reasons.Add($"The next mode is {Numbers.Short(result.Modes[2].Rate / gap.Rate, 3)} times as fast.");
         var failed = result.Remarks.Any(remark => remark.IsFailure);
         var page = new PageModel("relax", title, "How fast does the density relax to equilibrium, in which shapes, and how long does a walker stay in a well?",
-            new Verdict(failed ? VerdictTone.Failed : VerdictTone.Sound, $"The last memory of the start fades with a timescale of {Numbers.Short(1 / gap.Rate)}{time}.", reasons),
+            new Verdict(failed ? VerdictTone.Failed : VerdictTone.Sound, $"The last memory of the start fades with a timescale of {Numbers.Short(1 / gap.Rate)}{time}.", reasons) { Word = "rates and times" },
             [new KeyNumber("spectral gap", gap.Rate, labels.Time is null ? null : $"1/{labels.Time}"), new KeyNumber("slowest timescale", 1 / gap.Rate, labels.Time), .. result.Passages.Take(2).Select(row => new KeyNumber($"well {row.From + 1} to well {row.To + 1}", row.Time, labels.Time, "mean first passage time"))],
             sections);
         return new StudyReport(page, [.. new[] { modes, wells, passages, decay, Shapes(result, labels) }.Where(table => table.Rows.Count > 0)], [modes], figures, provenance, failed);

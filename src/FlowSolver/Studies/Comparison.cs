@@ -28,6 +28,9 @@ public sealed record ComparisonOptions
     /// <summary>Simulated draws behind each noise floor and p-value; the least p-value is 1/(draws + 1).</summary>
     public int NoiseDraws { get; init; } = 199;
 
+    /// <summary>Whether published error bounds are to be evaluated along the run; one dimension only.</summary>
+    public bool DrawsBounds { get; init; }
+
     /// <summary>Walkers kept of each ensemble at each report time, for pictures.</summary>
     public int KeptWalkers { get; init; } = 1500;
 }
@@ -67,8 +70,9 @@ public static class Comparison
                 return state.Result(interrupted: true);
         }
 
+        var bounds = options.DrawsBounds && grid?.Dimension == 1 ? state.Bounds(cancellation) : [];
         progress?.Report(new ComparisonProgress(plan.ReportTimes.Count, plan.ReportTimes.Count, "done"));
-        return state.Result(interrupted: false);
+        return state.Result(interrupted: false) with { Bounds = bounds };
     }
 
     /// <summary>
@@ -408,6 +412,20 @@ public static class Comparison
                 }
 
                 return found;
+            }
+        }
+
+        // Bounds of methods that are shown; they are a help to the reader, and an interrupt just leaves them out.
+        public IReadOnlyList<BoundCurve> Bounds(CancellationToken cancellation)
+        {
+            try
+            {
+                return [.. ErrorBounds.Of(problem, StartOnGrid.Create(problem.Problem.Start, problem.Grid), plan, team, cancellation)
+                    .Where(bound => flows.Exists(track => track.Shown && track.Scheme.Traits.Name == bound.Method))];
+            }
+            catch (OperationCanceledException)
+            {
+                return [];
             }
         }
 

@@ -138,6 +138,9 @@ public sealed record ComparisonResult
     /// <summary>Whether the run was interrupted before its end; then everything holds what had been finished.</summary>
     public required bool Interrupted { get; init; }
 
+    /// <summary>Published bounds along the run; empty where they were not asked for.</summary>
+    public IReadOnlyList<BoundCurve> Bounds { get; init; } = [];
+
     /// <summary>Whether any method failed.</summary>
     public bool HasFailures => Remarks.Any(remark => remark.IsFailure);
 }
