@@ -7,21 +7,28 @@ namespace FlowSolver.Schemes.Jko;
 /// <see cref="GridProblem.Equilibrium"/> to the last bit. Immutable.
 /// </summary>
 /// <remarks>
-/// Within a cell the cumulative mass is the rational quadratic that takes given values and slopes at both edges (J. A. Gregory, R. Delbourgo,
-/// Piecewise rational quadratic interpolation to monotonic data, IMA J. Numer. Anal. 2 (1982) 123-130; from memory): with t ∈ [0, 1] and edge
-/// densities l, r in units of the cell's mean, D(t) = 1 + (l + r − 2) t(1 − t),
-/// mass between t₁ and t₂ = (t₂ − t₁) B(t₁, t₂) / (D(t₁) D(t₂)), B(s, t) = l(1−s)(1−t) + (s + t − 2st) + r s t, density = B(t, t)/D(t)².
-/// Every term is positive, whatever the contrast, and nothing cancels however close t₁ and t₂ are. Edge densities are e^(−V/T) at the edge,
-/// corrected to fourth order for the cells' means being centre values, exactly so for an exponential. Levels are kept as logarithms: cells of
-/// a height of thousands of T do no harm.
+/// Within a cell the cumulative mass is a rational quadratic that takes given values and slopes at both edges (J. A. Gregory, R. Delbourgo,
+/// Piecewise rational quadratic interpolation to monotonic data, IMA J. Numer. Anal. 2 (1982) 123-130; from memory), in the coordinate s of an exponential:
+/// s(t) = (1 − e^(−zt))/(1 − e^(−z)) with t ∈ [0, 1] and z the log of the densities' ratio at the edges; s = t where |z| is below 0.1. With edge
+/// densities l, r with respect to s in units of the cell's mean, D(s) = 1 + (l + r − 2) s(1 − s),
+/// mass between s₁ and s₂ = (s₂ − s₁) B(s₁, s₂)/(D(s₁) D(s₂)), B(p, q) = l(1−p)(1−q) + (p + q − 2pq) + r p q, density = s′(t) B(s, s)/D(s)².
+/// An exponential comes out exactly, so that a steep cell puts no ripple on the force; every term is positive, whatever the contrast; and nothing
+/// cancels however close t₁ and t₂ are. Edge densities are e^(−V/T) at the edge, corrected to fourth order for the cells' means being centre values,
+/// exactly so for an exponential. Levels are kept as logarithms: cells at a height of thousands of T do no harm.
 /// </remarks>
 internal sealed class EquilibriumProfile
 {
-    /// <summary>Entries of <see cref="Table"/> for one cell: left edge density, right edge density, log of the level, level of the next cell over this one.</summary>
-    public const int Stride = 4;
+    /// <summary>
+    /// Entries of <see cref="Table"/> for one cell: l, r, log of the level, level of the next cell over this one, z, s′(0), 1/(1 − e^(−z)).
+    /// </summary>
+    public const int Stride = 8;
+
+    /// <summary>Where z·(t₂ − t₁) is below, s₂ − s₁ comes from a series.</summary>
+    public const double LargestSeriesArgument = 0.25;
 
     private const double LargestEdgeLog = 30;
     private const double LargestStepLog = 600;
+    private const double LeastSteepness = 0.1;
     private const double LargestCurvatureCorrection = 0.05;
 
     public EquilibriumProfile(GridProblem problem)
@@ -73,8 +80,24 @@ internal sealed class EquilibriumProfile
         for (var cell = 0; cell < cells; cell++)
         {
             var level = -(potential[cell] - least) / Temperature;
-            Table[Stride * cell] = Math.Exp(Math.Clamp(edgeLog[cell] - level, -LargestEdgeLog, LargestEdgeLog));
-            Table[Stride * cell + 1] = Math.Exp(Math.Clamp(edgeLog[cell + 1] - level, -LargestEdgeLog, LargestEdgeLog));
+            var steepness = Math.Clamp(edgeLog[cell] - edgeLog[cell + 1], -LargestStepLog, LargestStepLog);
+            double startSlope = 1, endSlope = 1, scale = 0;
+            if (Math.Abs(steepness) < LeastSteepness)
+            {
+                steepness = 0;
+            }
+            else
+            {
+                scale = -1 / (Math.Exp(-steepness) - 1);
+                startSlope = steepness * scale;
+                endSlope = startSlope * Math.Exp(-steepness);
+            }
+
+            Table[Stride * cell] = Math.Exp(Math.Clamp(edgeLog[cell] - level - Math.Log(startSlope), -LargestEdgeLog, LargestEdgeLog));
+            Table[Stride * cell + 1] = Math.Exp(Math.Clamp(edgeLog[cell + 1] - level - Math.Log(endSlope), -LargestEdgeLog, LargestEdgeLog));
+            Table[Stride * cell + 4] = steepness;
+            Table[Stride * cell + 5] = startSlope;
+            Table[Stride * cell + 6] = scale;
             Table[Stride * cell + 2] = level;
             if (Axis.IsPeriodic || cell < cells - 1)
                 Table[Stride * cell + 3] = Math.Exp(Math.Clamp((potential[cell] - At(cell + 1)) / Temperature, -LargestStepLog, LargestStepLog));
@@ -91,7 +114,7 @@ internal sealed class EquilibriumProfile
 
     public double Temperature { get; }
 
-    /// <summary>Four numbers a cell; see <see cref="Stride"/>. The level is log of the cell's mean, relative to the highest cell.</summary>
+    /// <summary>Numbers of each cell; see <see cref="Stride"/>. The level is log of the cell's mean, relative to the highest cell.</summary>
     public double[] Table { get; }
 
     /// <summary>log of the mass of all cells, in the units of the levels.</summary>
@@ -117,63 +140,103 @@ internal sealed class EquilibriumProfile
         return Axis.IsPeriodic ? cell : Math.Clamp(cell, 0, Axis.Cells - 1);
     }
 
-    /// <summary>Share of a cell between s and t in units of the cell: mass between over mass of the cell.</summary>
-    /// <param name="left">Left edge density in units of the mean.</param>
-    /// <param name="right">Right edge density in units of the mean.</param>
-    /// <param name="s">Lower place, 0 … 1.</param>
-    /// <param name="t">Upper place.</param>
-    /// <param name="width">t − s, which the caller may know better than the difference.</param>
-    public static double Share(double left, double right, double s, double t, double width)
-        => width * (left * (1 - s) * (1 - t) + (s + t - 2 * s * t) + right * s * t)
-            / (Denominator(left, right, s) * Denominator(left, right, t));
-
     /// <summary>The mass between places in two different cells, in units that neither overflow nor vanish.</summary>
     /// <param name="first">Cell of the lower place.</param>
-    /// <param name="s">Lower place in it.</param>
+    /// <param name="from">Lower place in it, 0 … 1.</param>
     /// <param name="last">Cell of the upper place.</param>
-    /// <param name="t">Upper place in it.</param>
+    /// <param name="to">Upper place in it.</param>
     /// <param name="width">Distance between the two places in units of length.</param>
     /// <returns>The mass is Mass·e^Level; the mean of the first cell is LowerScale·e^Level and that of the last UpperScale·e^Level.</returns>
-    public (double Mass, double Level, double LowerScale, double UpperScale) MassAcross(int first, double s, int last, double t, double width)
+    public (double Mass, double Level, double LowerScale, double UpperScale) MassAcross(int first, double from, int last, double to, double width)
     {
         var lower = Stride * Wrap(first);
         var upper = Stride * Wrap(last);
         if (last == first + 1)
         {
             // The two parts add up to the width exactly; where the edge lies between hardly matters, since the density is continuous there.
-            var below = Math.Clamp((1 - s) * Axis.Width, 0, width);
+            var below = Math.Clamp((1 - from) * Axis.Width, 0, width);
             var above = width - below;
             var step = Table[lower + 3];
-            var mass = below * Share(Table[lower], Table[lower + 1], s, 1, 1) + above * Share(Table[upper], Table[upper + 1], 0, t, 1) * step;
+            var mass = Axis.Width * (ShareOf(lower, from, 1, below / Axis.Width) + ShareOf(upper, 0, to, above / Axis.Width) * step);
             return (mass, Table[lower + 2], 1, step);
         }
 
+        // Rounding at the end of a piece: the two are the same place.
         if (last < first)
-        {
-            // Rounding at the end of a piece: the two are the same place.
-            return (width * RelativeDensity(Table[lower], Table[lower + 1], s), Table[lower + 2], 1, Math.Exp(Table[upper + 2] - Table[lower + 2]));
-        }
+            return (width * RelativeDensity(lower, from), Table[lower + 2], 1, Math.Exp(Table[upper + 2] - Table[lower + 2]));
 
         var level = Math.Max(Table[lower + 2], Table[upper + 2]);
         for (var cell = first + 1; cell < last; cell++)
             level = Math.Max(level, Table[Stride * Wrap(cell) + 2]);
         var lowerScale = Math.Exp(Table[lower + 2] - level);
         var upperScale = Math.Exp(Table[upper + 2] - level);
-        var sum = lowerScale * Share(Table[lower], Table[lower + 1], s, 1, 1 - s) + upperScale * Share(Table[upper], Table[upper + 1], 0, t, t);
+        var sum = lowerScale * ShareOf(lower, from, 1, 1 - from) + upperScale * ShareOf(upper, 0, to, to);
         for (var cell = first + 1; cell < last; cell++)
             sum += Math.Exp(Table[Stride * Wrap(cell) + 2] - level);
         return (sum * Axis.Width, level, lowerScale, upperScale);
     }
 
-    /// <summary>D(t).</summary>
-    public static double Denominator(double left, double right, double t) => 1 + (left + right - 2) * t * (1 - t);
-
-    /// <summary>Density at t in units of the cell's mean.</summary>
-    public static double RelativeDensity(double left, double right, double t)
+    /// <summary>Share of a cell's mass between two places.</summary>
+    /// <param name="entry">The cell's place in the table.</param>
+    /// <param name="from">Lower place, 0 … 1.</param>
+    /// <param name="to">Upper place.</param>
+    /// <param name="width">to − from, which the caller may know better than the difference.</param>
+    public double ShareOf(int entry, double from, double to, double width)
     {
-        var denominator = Denominator(left, right, t);
-        return (left * (1 - t) * (1 - t) + 2 * t * (1 - t) + right * t * t) / (denominator * denominator);
+        var (left, right, steepness) = (Table[entry], Table[entry + 1], Table[entry + 4]);
+        if (steepness == 0)
+            return RationalShare(left, right, from, to, width);
+        var (lower, upper) = (Math.Exp(-steepness * from), Math.Exp(-steepness * to));
+        var scale = Table[entry + 6];
+        var argument = steepness * width;
+        var difference = Math.Abs(argument) < LargestSeriesArgument
+            ? Table[entry + 5] * lower * width * SeriesFactor(argument)
+            : (lower - upper) * scale;
+        return RationalShare(left, right, (1 - lower) * scale, (1 - upper) * scale, difference);
     }
+
+    /// <summary>Density at a place in units of the cell's mean.</summary>
+    public double RelativeDensity(int entry, double place)
+    {
+        var (left, right, steepness) = (Table[entry], Table[entry + 1], Table[entry + 4]);
+        var exponential = Math.Exp(-steepness * place);
+        var s = steepness == 0 ? place : (1 - exponential) * Table[entry + 6];
+        var denominator = Denominator(left, right, s);
+        return Table[entry + 5] * exponential * (left * (1 - s) * (1 - s) + 2 * s * (1 - s) + right * s * s) / (denominator * denominator);
+    }
+
+    /// <summary>(1 − e^(−y))/y for |y| below <see cref="LargestSeriesArgument"/>.</summary>
+    public static double SeriesFactor(double y)
+    {
+        var sum = 0.0;
+        for (var k = SeriesTerms; k >= 0; k--)
+            sum = sum * -y + SeriesCoefficient(k);
+        return sum;
+    }
+
+    /// <summary>Number of the last term of the series.</summary>
+    public const int SeriesTerms = 11;
+
+    /// <summary>1/(k + 1)!.</summary>
+    public static double SeriesCoefficient(int k)
+    {
+        var factorial = 1.0;
+        for (var i = 2; i <= k + 1; i++)
+            factorial *= i;
+        return 1 / factorial;
+    }
+
+    /// <summary>(t − s) B(s, t)/(D(s) D(t)): the share of a mass between two places under a rational quadratic.</summary>
+    /// <param name="left">Slope at 0 in units of the mean.</param>
+    /// <param name="right">Slope at 1 in units of the mean.</param>
+    /// <param name="s">Lower place, 0 … 1.</param>
+    /// <param name="t">Upper place.</param>
+    /// <param name="width">t − s, which the caller may know better than the difference.</param>
+    public static double RationalShare(double left, double right, double s, double t, double width)
+        => width * (left * (1 - s) * (1 - t) + (s + t - 2 * s * t) + right * s * t)
+            / (Denominator(left, right, s) * Denominator(left, right, t));
+
+    private static double Denominator(double left, double right, double t) => 1 + (left + right - 2) * t * (1 - t);
 
     /// <summary>log(sinh(z)/z): how much the mean of an exponential over a cell exceeds its centre value.</summary>
     public static double LogSinhRatio(double z)

@@ -5,9 +5,10 @@ using FlowSolver.Transport;
 namespace FlowSolver.Schemes.Jko;
 
 /// <summary>
-/// A first guess of a step whose tails are right to leading order: with φ = T log(ρₙ/π), the guess is π exp(−ψ/T), ψ(y) = min over x of
-/// |x − y|²/(2τ) − φ(x). A step's own density has this form with another function in the place of −φ (its Kantorovich potential), which is all that
-/// matters far from where the mass is: Gaussian tails beyond a jump, the way over a valley.
+/// First guesses of a step whose tails are right to leading order. A step's own density is π exp(−ψ/T), ψ(y) = min over x of |x − y|²/(2τ) + χ(x) with χ its
+/// Kantorovich potential: far from where the mass is, the parabolas are all that matters (Gaussian tails beyond a jump, the way over a valley).
+/// Two stand-ins for χ: that of a density near equilibrium, −T log(ρₙ/π); and, for steep V, the density first moved by the proximal map of V and then
+/// spread without V.
 /// </summary>
 internal sealed class QuantileGuess
 {
@@ -28,17 +29,22 @@ internal sealed class QuantileGuess
         mass = new double[profile.Axis.Cells];
     }
 
-    /// <summary>Moves the solver's nodes to the guess.</summary>
+    /// <summary>Moves the solver's nodes to a guess.</summary>
     /// <param name="solver">Its masses are kept; its nodes are moved.</param>
     /// <param name="density">ρₙ, as cell averages.</param>
     /// <param name="step">τ times the mobility.</param>
-    public void MoveNodes(QuantileNewton solver, ReadOnlySpan<double> density, double step)
+    /// <param name="driftFirst">Whether the density is moved by V first.</param>
+    public void MoveNodes(QuantileNewton solver, ReadOnlySpan<double> density, double step, bool driftFirst)
     {
         var temperature = profile.Temperature;
+        if (driftFirst)
+            Drift(density, step);
+        else
+            density.CopyTo(mass);
         for (var i = 0; i < potential.Length; i++)
         {
-            potential[i] = density[i] > 0
-                ? temperature * (profile.Table[EquilibriumProfile.Stride * i + 2] - Math.Log(density[i]))
+            potential[i] = mass[i] > 0
+                ? temperature * ((driftFirst ? 0 : EquilibriumLog(i)) - Math.Log(mass[i]))
                 : double.PositiveInfinity;
         }
 
@@ -47,7 +53,7 @@ internal sealed class QuantileGuess
         var highest = double.NegativeInfinity;
         for (var i = 0; i < mass.Length; i++)
         {
-            mass[i] = profile.Table[EquilibriumProfile.Stride * i + 2] - envelope[i] / temperature;
+            mass[i] = (driftFirst ? 0 : EquilibriumLog(i)) - envelope[i] / temperature;
             highest = Math.Max(highest, mass[i]);
         }
 
@@ -55,6 +61,44 @@ internal sealed class QuantileGuess
             mass[i] = Math.Exp(Math.Max(mass[i] - highest, -600));
         SpanKernels.Scale(mass, 1 / SpanKernels.Sum(mass));
         Fill(solver, profile.Axis.IsPeriodic ? StartOnCircle(density, solver.Ends[0]) : 0);
+    }
+
+    private double EquilibriumLog(int cell) => profile.Table[EquilibriumProfile.Stride * cell + 2];
+
+    // Mass of each cell after y + τV′(y) = x: the cell takes what lay between the origins of its edges. Where V is too concave for the step the map
+    // folds; the origins are then kept in order.
+    private void Drift(ReadOnlySpan<double> density, double step)
+    {
+        var cells = mass.Length;
+        var width = profile.Axis.Width;
+        var origin = OriginOf(0, step);
+        for (var i = 0; i < cells; i++)
+        {
+            var next = Math.Max(OriginOf(i + 1, step), origin);
+            mass[i] = MassBetween(density, origin / width, next / width);
+            origin = next;
+        }
+    }
+
+    // Counted from the lower end of the axis; on a circle it may lie beyond the ends.
+    private double OriginOf(int edge, double step)
+    {
+        var axis = profile.Axis;
+        if (!axis.IsPeriodic && (edge == 0 || edge == axis.Cells))
+            return edge * axis.Width;
+        var slope = -profile.Temperature * (EquilibriumLog(profile.Wrap(edge)) - EquilibriumLog(profile.Wrap(edge - 1))) / axis.Width;
+        var origin = edge * axis.Width + step * slope;
+        return axis.IsPeriodic ? origin : Math.Clamp(origin, 0, axis.Interval.Length);
+    }
+
+    private double MassBetween(ReadOnlySpan<double> density, double from, double to)
+    {
+        var sum = 0.0;
+        // A circle is gone round once at most: folds may ask for more.
+        to = Math.Min(to, from + density.Length);
+        for (var cell = (int)Math.Floor(from); cell < to; cell++)
+            sum += density[Math.Clamp(profile.Wrap(cell), 0, density.Length - 1)] * (Math.Min(to, cell + 1) - Math.Max(from, cell));
+        return sum;
     }
 
     // Where the lowest node goes: the best cut of the circle says which mass of the guess belongs to which of the density.

@@ -10,7 +10,7 @@ namespace FlowSolver.Schemes.Jko;
 /// Between cell edges the start is interpolated like the equilibrium (see <see cref="EquilibriumProfile"/>), with the share of the equilibrium's mass
 /// in place of the position, so that a start that is the equilibrium gives parcels whose masses are its own, to rounding, wherever the nodes are.
 /// Nodes are spread so that each parcel spans an equal sum of cells at the start and cells of the equilibrium. Where the density jumps by more than e⁴
-/// between neighbouring cells, or ends inside the domain, there is a node at the jump and the parcels on the dense side shrink towards it by halves,
+/// between neighbouring cells, or ends inside the domain, there is a node at the jump and the parcels on the dense side shrink towards it geometrically,
 /// since they will have to fill what lies beyond. All positions are counted from the lower end of the axis.
 /// </remarks>
 internal sealed class QuantileMesh
@@ -20,6 +20,9 @@ internal sealed class QuantileMesh
     private const double JumpLog = 4;
     private const double LeastMass = 1e-60;
     private const double NegligibleMass = 1e-36;
+
+    // Two neighbours of this ratio meet the decay rate of an exponential to (log ratio)²/12, 0.4 %.
+    private const double TaperRatio = 0.8;
     private const double LargestEdgeLog = 3;
     private const double MostNodesPerCell = 1e4;
 
@@ -95,12 +98,12 @@ internal sealed class QuantileMesh
 
         public int Parcels { get; set; }
 
-        public int HalvingsBelow { get; set; }
+        public int TaperBelow { get; set; }
 
-        public int HalvingsAbove { get; set; }
+        public int TaperAbove { get; set; }
     }
 
-    private double LogRatio(int cell) => Math.Log(masses[cell]) - profile.Table[EquilibriumProfile.Stride * cell + 2];
+    private double LogRatio(int cell) => Math.Log(masses[cell]) - EquilibriumLog(cell);
 
     private bool IsJump(int lower, int upper)
         => !(masses[lower] > 0) || !(masses[upper] > 0) || Math.Abs(Math.Log(masses[upper] / masses[lower])) > JumpLog;
@@ -116,10 +119,9 @@ internal sealed class QuantileMesh
             var lower = edge == 0 ? cells - 1 : edge - 1;
             if (IsJump(lower, edge))
                 continue;
-            var step = LogRatio(edge) - LogRatio(lower);
-            var middle = -EquilibriumProfile.LogSinhRatio(0.5 * step);
-            rightSlope[lower] = Math.Exp(Math.Clamp(0.5 * step + middle, -LargestEdgeLog, LargestEdgeLog));
-            leftSlope[edge] = Math.Exp(Math.Clamp(-0.5 * step + middle, -LargestEdgeLog, LargestEdgeLog));
+            var at = EdgeLogRatio(lower, edge);
+            rightSlope[lower] = Math.Exp(Math.Clamp(at - LogRatio(lower), -LargestEdgeLog, LargestEdgeLog));
+            leftSlope[edge] = Math.Exp(Math.Clamp(at - LogRatio(edge), -LargestEdgeLog, LargestEdgeLog));
         }
 
         for (var cell = 0; cell < cells; cell++)
@@ -131,6 +133,30 @@ internal sealed class QuantileMesh
             if (double.IsNaN(right))
                 rightSlope[cell] = double.IsNaN(left) ? 1 : MirrorSlope(left);
         }
+    }
+
+    // log of start over equilibrium at an edge: cubic through four cells where there are four, and both densities corrected alike for their cells' values
+    // being averages (see EquilibriumProfile), so that nothing is left of it when they are the same. A start rough at this level would stay so
+    // under steps that do not damp.
+    private double EdgeLogRatio(int lower, int upper)
+    {
+        var (below, above) = (LogRatio(lower), LogRatio(upper));
+        var middle = 0.5 * (below + above);
+        var step = EquilibriumLog(upper) - EquilibriumLog(lower);
+        var correction = EquilibriumProfile.LogSinhRatio(0.5 * step) - EquilibriumProfile.LogSinhRatio(0.5 * (step + above - below));
+        var (first, last) = (Neighbour(lower, -1), Neighbour(upper, 1));
+        if (first < 0 || last < 0 || IsJump(first, lower) || IsJump(upper, last))
+            return middle + correction;
+        var bend = LogRatio(last) - above - (below - LogRatio(first));
+        return middle - bend / 16 + correction - Math.Clamp(bend / 48, -0.05, 0.05);
+    }
+
+    private double EquilibriumLog(int cell) => profile.Table[EquilibriumProfile.Stride * cell + 2];
+
+    private int Neighbour(int cell, int direction)
+    {
+        var next = cell + direction;
+        return axis.IsPeriodic ? profile.Wrap(next) : next < axis.Cells ? next : -1;
     }
 
     // For an exponential of step z a cell the edges are e^(±z/2)·(z/2)/sinh(z/2): the two differ by the factor e^z.
@@ -191,11 +217,10 @@ internal sealed class QuantileMesh
 
     private double ShareOfCell(int cell, double s, double width)
     {
-        var (left, right) = (profile.Table[EquilibriumProfile.Stride * cell], profile.Table[EquilibriumProfile.Stride * cell + 1]);
+        var entry = EquilibriumProfile.Stride * cell;
         var t = Math.Min(s + width, 1);
-        var from = EquilibriumProfile.Share(left, right, 0, s, s);
-        var to = EquilibriumProfile.Share(left, right, 0, t, t);
-        return EquilibriumProfile.Share(leftSlope[cell], rightSlope[cell], from, to, EquilibriumProfile.Share(left, right, s, t, width));
+        return EquilibriumProfile.RationalShare(
+            leftSlope[cell], rightSlope[cell], profile.ShareOf(entry, 0, s, s), profile.ShareOf(entry, 0, t, t), profile.ShareOf(entry, s, t, width));
     }
 
     private void Cut(List<Segment> segments, ReadOnlySpan<double> equilibrium, int parcels, int multiple)
@@ -206,13 +231,13 @@ internal sealed class QuantileMesh
             total += segment.Breakpoints[^1].Count;
         foreach (var segment in segments)
             segment.Parcels = Math.Max(2, (int)Math.Round(parcels * segment.Breakpoints[^1].Count / total));
-        CountHalvings(segments);
+        CountTapers(segments);
         foreach (var segment in segments)
-            HasJumps |= segment.HalvingsBelow + segment.HalvingsAbove > 0;
+            HasJumps |= segment.TaperBelow + segment.TaperAbove > 0;
 
         var made = 0;
         foreach (var segment in segments)
-            made += segment.Parcels + segment.HalvingsBelow + segment.HalvingsAbove;
+            made += segment.Parcels + segment.TaperBelow + segment.TaperAbove;
         var largest = segments[0];
         foreach (var segment in segments)
         {
@@ -293,7 +318,7 @@ internal sealed class QuantileMesh
         }
     }
 
-    private void CountHalvings(List<Segment> segments)
+    private void CountTapers(List<Segment> segments)
     {
         for (var k = 0; k < segments.Count; k++)
         {
@@ -302,21 +327,21 @@ internal sealed class QuantileMesh
             var upper = k + 1 < segments.Count ? segments[k + 1] : axis.IsPeriodic ? segments[0] : null;
             var cellsBelow = segment.First - (lower is null ? 0 : lower.End - (k > 0 ? 0 : axis.Cells));
             var cellsAbove = (upper is null ? axis.Cells : upper.First + (k + 1 < segments.Count ? 0 : axis.Cells)) - segment.End;
-            segment.HalvingsBelow = Halvings(segment, segment.First, lower, lower is null ? -1 : lower.End - 1, cellsBelow);
-            segment.HalvingsAbove = Halvings(segment, segment.End - 1, upper, upper is null ? -1 : upper.First, cellsAbove);
+            segment.TaperBelow = Taper(segment, segment.First, lower, lower is null ? -1 : lower.End - 1, cellsBelow);
+            segment.TaperAbove = Taper(segment, segment.End - 1, upper, upper is null ? -1 : upper.First, cellsAbove);
         }
     }
 
     // Enough to bring the parcel at the jump down to its neighbour's mass; into an empty stretch, to what can reach its far end.
-    private int Halvings(Segment segment, int cell, Segment? neighbour, int neighbourCell, int emptyCells)
+    private int Taper(Segment segment, int cell, Segment? neighbour, int neighbourCell, int emptyCells)
     {
         var parcel = masses[cell] / segment.Parcels * (segment.End - segment.First);
         if (emptyCells > 0)
-            return Math.Clamp((int)Math.Log2(parcel / NegligibleMass), 0, 12 + 2 * emptyCells);
+            return Math.Clamp((int)Math.Log(parcel / NegligibleMass, 1 / TaperRatio), 0, 40 + 6 * emptyCells);
         if (neighbour is null || (ReferenceEquals(segment, neighbour) && !IsJump(neighbourCell, cell) && !IsJump(cell, neighbourCell)))
             return 0;
         var ratio = parcel / (masses[neighbourCell] / neighbour.Parcels * (neighbour.End - neighbour.First));
-        return ratio > 2 ? Math.Min(900, (int)Math.Ceiling(Math.Log2(ratio))) : 0;
+        return ratio > 2 ? (int)Math.Ceiling(Math.Log(ratio, 1 / TaperRatio)) : 0;
     }
 
     private void CutSegment(Segment segment)
@@ -344,36 +369,30 @@ internal sealed class QuantileMesh
 
             var gap = next - position;
             if (k == 1)
-                Halve(position, gap, segment, segment.HalvingsBelow, towardsLower: true);
+                AddTapered(position, gap, segment, segment.TaperBelow, towardsLower: true);
             else if (k == segment.Parcels)
-                Halve(position, gap, segment, segment.HalvingsAbove, towardsLower: false);
+                AddTapered(position, gap, segment, segment.TaperAbove, towardsLower: false);
             else
                 AddParcel(position, gap, segment, position, next);
             position = next;
         }
     }
 
-    // One parcel as 1/2ᵏ, 1/2ᵏ, … 1/4, 1/2 of its width, the small ones at the chosen end.
-    private void Halve(double position, double gap, Segment segment, int halvings, bool towardsLower)
+    // One parcel as many that shrink towards one of its ends by a fixed ratio; pieces = 0 leaves it whole.
+    private void AddTapered(double position, double gap, Segment segment, int pieces, bool towardsLower)
     {
-        if (halvings == 0)
-        {
-            AddParcel(position, gap, segment, position, position + gap);
-            return;
-        }
-
-        if (towardsLower)
-        {
-            AddParcel(position, Math.ScaleB(gap, -halvings), segment, position, position + Math.ScaleB(gap, -halvings));
-            for (var k = halvings; k >= 1; k--)
-                AddParcel(position + Math.ScaleB(gap, -k), Math.ScaleB(gap, -k), segment, position + Math.ScaleB(gap, -k), position + Math.ScaleB(gap, 1 - k));
-            return;
-        }
-
         var end = position + gap;
-        for (var k = 1; k <= halvings; k++)
-            AddParcel(end - Math.ScaleB(gap, 1 - k), Math.ScaleB(gap, -k), segment, end - Math.ScaleB(gap, 1 - k), end - Math.ScaleB(gap, -k));
-        AddParcel(end - Math.ScaleB(gap, -halvings), Math.ScaleB(gap, -halvings), segment, end - Math.ScaleB(gap, -halvings), end);
+        for (var k = 0; k <= pieces; k++)
+        {
+            // Distances of the piece's ends from the end towards which the pieces shrink.
+            var power = towardsLower ? pieces - k : k;
+            var far = gap * Math.Pow(TaperRatio, power);
+            var near = power == pieces ? 0 : far * TaperRatio;
+            if (towardsLower)
+                AddParcel(position + near, far - near, segment, position + near, power == 0 ? end : position + far);
+            else
+                AddParcel(end - far, far - near, segment, power == 0 ? position : end - far, end - near);
+        }
     }
 
     private void AddParcel(double position, double gap, Segment segment, double lower, double upper)

@@ -43,9 +43,16 @@ internal sealed class QuantileNewton
     private const double LeastGroundShare = 0.1;
     private const double NarrowShare = 1e-3;
 
-    // Parcels lighter than this need only be right to 1e-3, and only for so many Newton steps more than the rest takes.
-    private const double SeenMass = 1e-24;
+    // Parcels lighter than this hold the iteration up only until they are right to 1e-3, and only for so many Newton steps more than the rest takes.
+    private const double SeenMass = 1e-12;
     private const int TailPatience = 10;
+
+    // Parcels up to this mass give way to heavier ones; what so little mass does to the energy is not looked at.
+    private const double LightMass = 1e-4;
+    private const double LeastRoom = 0.1;
+    private const double UnseenInEnergy = 1e-8;
+
+    private static readonly double[] SeriesCoefficients = [.. Enumerable.Range(0, EquilibriumProfile.SeriesTerms + 1).Select(EquilibriumProfile.SeriesCoefficient)];
 
     private readonly EquilibriumProfile profile;
     private readonly WorkerTeam team;
@@ -63,6 +70,11 @@ internal sealed class QuantileNewton
     private readonly double[] gapBefore;
     private readonly double[] change;
     private readonly double[] dual;
+
+    // In the order along the axis.
+    private readonly double[] target;
+    private readonly double[] wish;
+    private readonly bool[] repaired;
 
     // Elimination: position change = load + towardsLower·(lower end) + towardsUpper·(next), ground = 1 − towardsLower − towardsUpper.
     private readonly double[] towardsLower;
@@ -119,6 +131,9 @@ internal sealed class QuantileNewton
         gapBefore = new double[Count];
         change = new double[Count];
         dual = new double[Count];
+        target = new double[Count];
+        wish = new double[Count];
+        repaired = new bool[Count];
         towardsLower = new double[Count];
         towardsUpper = new double[Count];
         ground = new double[Count];
@@ -207,6 +222,16 @@ internal sealed class QuantileNewton
         return temperature * (entropy - SpanKernels.Sum(logSum) + profile.LogMass);
     }
 
+    /// <summary>E for a step, where the nodes are, less a constant.</summary>
+    public double EnergyOf(double step)
+    {
+        inverseStep = 1 / step;
+        stiffenLocally = false;
+        Array.Fill(dual, 1.0);
+        RunBlocks(forwardJob);
+        return Energy();
+    }
+
     /// <summary>Moves the nodes to the minimum, from where they are.</summary>
     /// <param name="step">τ times the mobility.</param>
     public MinimisationReport Minimise(double step)
@@ -219,14 +244,17 @@ internal sealed class QuantileNewton
         var iterations = 0;
         var patience = TailPatience;
         var residual = double.PositiveInfinity;
+        var repairedMass = 0.0;
+        var shortFraction = 1.0;
         for (var evaluations = 0; evaluations < MostIterations; evaluations++)
         {
             RunBlocks(forwardJob);
             var energy = Energy();
-            var slack = 1e-13 * (Math.Abs(energy) + temperature);
+            var slack = 1e-13 * (Math.Abs(energy) + temperature) + (repairedMass < UnseenInEnergy ? 50 * temperature * repairedMass : 0);
             if (energy > energyBefore - 1e-4 * fraction * decrementBefore + slack || double.IsNaN(energy))
             {
-                fraction *= 0.5;
+                fraction = repairedMass > 0 ? shortFraction : 0.5 * fraction;
+                repairedMass = 0;
                 if (fraction < LeastFraction)
                     break;
                 RunBlocks(retreatJob);
@@ -257,16 +285,25 @@ internal sealed class QuantileNewton
             }
 
             residual = Math.Sqrt(step * decrement);
-            fraction = shrink < BoundaryFraction ? 1 : BoundaryFraction / shrink;
-            RunBlocks(stepJob);
-            for (var i = 0; i <= Lanes; i++)
+            shortFraction = BoundaryFraction / shrink;
+            fraction = shrink < BoundaryFraction ? 1 : shortFraction;
+            repairedMass = 0;
+            if (fraction < 1 && RepairTails(out repairedMass))
             {
-                endBefore[i] = end[i];
-                end[i] += fraction * endChange[i];
+                fraction = 1;
+            }
+            else
+            {
+                RunBlocks(stepJob);
+                for (var i = 0; i <= Lanes; i++)
+                {
+                    endBefore[i] = end[i];
+                    end[i] += fraction * endChange[i];
+                }
             }
 
             iterations++;
-            if (residual <= 1e-8 * length && seen <= 1e-7 && (largest <= 1e-3 || --patience < 0))
+            if (repairedMass == 0 && residual <= 1e-8 * length && seen <= 1e-7 && (largest <= 1e-3 || --patience < 0))
                 return new MinimisationReport(iterations, residual, true);
             (energyBefore, decrementBefore) = (energy, decrement);
             stiffenLocally &= largest > 0.1;
@@ -312,14 +349,25 @@ internal sealed class QuantileNewton
             job(group);
     }
 
-    // What one node contributes to the parcels beside it.
+    // What one node contributes to the parcels beside it; see EquilibriumProfile for the letters.
     private struct Node
     {
         public Vector512<double> Cell;
-        public Vector512<double> Place;
         public Vector512<double> Left;
         public Vector512<double> Right;
         public Vector512<double> Level;
+        public Vector512<double> Steepness;
+        public Vector512<double> StartSlope;
+        public Vector512<double> Scale;
+        public bool AnySteep;
+
+        // t, s and s′.
+        public Vector512<double> Offset;
+        public Vector512<double> Place;
+        public Vector512<double> PlaceSlope;
+        public Vector512<double> Exponential;
+
+        // B(s, s) and D(s).
         public Vector512<double> Numerator;
         public Vector512<double> Denominator;
 
@@ -338,15 +386,28 @@ internal sealed class QuantileNewton
             cell = Vector512.Min(Vector512.Max(cell, Vector512<double>.Zero), Vector512.Create(profile.Axis.Cells - 1.0));
         if (!Vector512.EqualsAll(cell, node.Cell))
             LoadCells(cell, ref node);
-        var t = scaled - cell;
+        var offset = scaled - cell;
+        var t = offset;
+        var placeSlope = one;
+        if (node.AnySteep)
+        {
+            node.Exponential = VectorMath.Exp(-(node.Steepness * offset));
+            t = Vector512.ConditionalSelect(
+                Vector512.Equals(node.Steepness, Vector512<double>.Zero), offset, (one - node.Exponential) * node.Scale);
+            placeSlope = node.StartSlope * node.Exponential;
+        }
+
         var s = one - t;
         var edges = node.Left + node.Right - Vector512.Create(2.0);
         var turn = one - (t + t);
         var denominator = Vector512.FusedMultiplyAdd(edges, t * s, one);
         var numerator = Vector512.FusedMultiplyAdd(node.Left * s, s, Vector512.FusedMultiplyAdd(node.Right * t, t, (t + t) * s));
         var numeratorSlope = Vector512.FusedMultiplyAdd(node.Right, t, turn) - node.Left * s;
-        node.Slope = (numeratorSlope * denominator - edges * turn * numerator) * (inverseWidth + inverseWidth) / (numerator * denominator);
+        var slope = (numeratorSlope * denominator - edges * turn * numerator) * (placeSlope + placeSlope) / (numerator * denominator);
+        node.Slope = (slope - node.Steepness) * inverseWidth;
+        node.Offset = offset;
         node.Place = t;
+        node.PlaceSlope = placeSlope;
         node.Numerator = numerator;
         node.Denominator = denominator;
     }
@@ -355,23 +416,28 @@ internal sealed class QuantileNewton
     private void LoadCells(Vector512<double> cell, ref Node node)
     {
         Span<double> cells = stackalloc double[GroupLanes];
-        Span<double> left = stackalloc double[GroupLanes];
-        Span<double> right = stackalloc double[GroupLanes];
-        Span<double> level = stackalloc double[GroupLanes];
+        Span<double> values = stackalloc double[6 * GroupLanes];
         cell.CopyTo(cells);
         for (var lane = 0; lane < GroupLanes; lane++)
         {
             // A position that is not a number would otherwise ask for a cell far outside.
-            var place = double.IsFinite(cells[lane]) ? EquilibriumProfile.Stride * profile.Wrap((int)cells[lane]) : 0;
-            left[lane] = profile.Table[place];
-            right[lane] = profile.Table[place + 1];
-            level[lane] = profile.Table[place + 2];
+            var entry = double.IsFinite(cells[lane]) ? EquilibriumProfile.Stride * profile.Wrap((int)cells[lane]) : 0;
+            values[lane] = profile.Table[entry];
+            values[GroupLanes + lane] = profile.Table[entry + 1];
+            values[2 * GroupLanes + lane] = profile.Table[entry + 2];
+            values[3 * GroupLanes + lane] = profile.Table[entry + 4];
+            values[4 * GroupLanes + lane] = profile.Table[entry + 5];
+            values[5 * GroupLanes + lane] = profile.Table[entry + 6];
         }
 
         node.Cell = cell;
-        node.Left = Vector512.Create<double>(left);
-        node.Right = Vector512.Create<double>(right);
-        node.Level = Vector512.Create<double>(level);
+        node.Left = Vector512.Create<double>(values[..GroupLanes]);
+        node.Right = Vector512.Create<double>(values.Slice(GroupLanes, GroupLanes));
+        node.Level = Vector512.Create<double>(values.Slice(2 * GroupLanes, GroupLanes));
+        node.Steepness = Vector512.Create<double>(values.Slice(3 * GroupLanes, GroupLanes));
+        node.StartSlope = Vector512.Create<double>(values.Slice(4 * GroupLanes, GroupLanes));
+        node.Scale = Vector512.Create<double>(values.Slice(5 * GroupLanes, GroupLanes));
+        node.AnySteep = !Vector512.EqualsAll(node.Steepness, Vector512<double>.Zero);
     }
 
     // π/w at the lower and at the upper node of each lane's parcel, and log w.
@@ -384,21 +450,35 @@ internal sealed class QuantileNewton
         var one = Vector512<double>.One;
         var both = s * t;
         var numerator = Vector512.FusedMultiplyAdd(lower.Left * (one - s), one - t, Vector512.FusedMultiplyAdd(lower.Right, both, s + t - (both + both)));
-        var scaled = width * numerator;
+        var distance = lower.AnySteep ? PlaceDifference(in lower, in upper, width) : width;
+        var scaled = distance * numerator;
         var inverse = one / (scaled * (lower.Denominator * upper.Denominator));
-        lowerPull = lower.Numerator * (upper.Denominator * upper.Denominator) * inverse;
-        upperPull = upper.Numerator * (lower.Denominator * lower.Denominator) * inverse;
-        var same = Vector512.Equals(lower.Cell, upper.Cell);
+        lowerPull = lower.PlaceSlope * lower.Numerator * (upper.Denominator * upper.Denominator) * inverse;
+        upperPull = upper.PlaceSlope * upper.Numerator * (lower.Denominator * lower.Denominator) * inverse;
         var relative = scaled * (scaled * inverse);
         if (!Vector512.EqualsAll(lower.Cell, upper.Cell))
         {
-            relative = Vector512.ConditionalSelect(same, relative, one);
+            relative = Vector512.ConditionalSelect(Vector512.Equals(lower.Cell, upper.Cell), relative, one);
             CrossEdges(in lower, in upper, width, ref lowerPull, ref upperPull, ref relative, out var level);
             logMass = level + VectorMath.Log(relative);
             return;
         }
 
         logMass = lower.Level + VectorMath.Log(relative);
+    }
+
+    // s₂ − s₁ in units of length, for two places in one cell.
+    [MethodImpl(MethodImplOptions.NoInlining)]
+    private Vector512<double> PlaceDifference(in Node lower, in Node upper, Vector512<double> width)
+    {
+        var argument = lower.Steepness * (width * Vector512.Create(1 / profile.Axis.Width));
+        var sum = Vector512.Create(SeriesCoefficients[EquilibriumProfile.SeriesTerms]);
+        for (var k = EquilibriumProfile.SeriesTerms - 1; k >= 0; k--)
+            sum = Vector512.FusedMultiplyAdd(sum, -argument, Vector512.Create(SeriesCoefficients[k]));
+        var series = lower.PlaceSlope * width * sum;
+        var direct = (lower.Exponential - upper.Exponential) * lower.Scale * Vector512.Create(profile.Axis.Width);
+        return Vector512.ConditionalSelect(
+            Vector512.LessThan(Vector512.Abs(argument), Vector512.Create(EquilibriumProfile.LargestSeriesArgument)), series, direct);
     }
 
     // (log π)′ at the lower node less its mean over the parcel, (π′s integral over w), and that mean less (log π)′ at the upper node. Of narrow
@@ -432,10 +512,10 @@ internal sealed class QuantileNewton
             var (first, last) = (lower.Cell[lane], upper.Cell[lane]);
             if (first == last || double.IsNaN(first) || double.IsNaN(last))
                 continue;
-            var lowerDensity = lower.Numerator[lane] / (lower.Denominator[lane] * lower.Denominator[lane]);
-            var upperDensity = upper.Numerator[lane] / (upper.Denominator[lane] * upper.Denominator[lane]);
+            var lowerDensity = lower.PlaceSlope[lane] * lower.Numerator[lane] / (lower.Denominator[lane] * lower.Denominator[lane]);
+            var upperDensity = upper.PlaceSlope[lane] * upper.Numerator[lane] / (upper.Denominator[lane] * upper.Denominator[lane]);
             var found = profile.MassAcross(
-                (int)first, lower.Place[lane], (int)last, upper.Place[lane], values[4 * GroupLanes + lane]);
+                (int)first, lower.Offset[lane], (int)last, upper.Offset[lane], values[4 * GroupLanes + lane]);
             values[lane] = lowerDensity * found.LowerScale / found.Mass;
             values[GroupLanes + lane] = upperDensity * found.UpperScale / found.Mass;
             values[2 * GroupLanes + lane] = found.Mass;
@@ -701,6 +781,80 @@ internal sealed class QuantileNewton
             tension = Vector512.Max(one - tension * relative, Vector512.Create(LeastDualFactor) * tension);
             (tension * Vector512.FusedMultiplyAdd(part, relative, one)).StoreUnsafe(ref duals, at);
         }
+    }
+
+    // A full Newton step although light parcels would fold under it: each of them takes the width that its tension asks for, scaled with so many light
+    // neighbours as give room, so that tails do not hold up what carries the mass. False, and nothing is changed, where that takes heavy parcels.
+    private bool RepairTails(out double repairedMass)
+    {
+        repairedMass = 0;
+        for (var j = 0; j < Count; j++)
+        {
+            var place = PlaceOf(j);
+            var relative = change[place] / gap[place];
+            target[j] = gap[place] + change[place];
+            wish[j] = relative < 0 ? gap[place] / (1 - dual[place] * relative) : target[j];
+        }
+
+        Array.Clear(repaired);
+        for (var j = 0; j < Count; j++)
+        {
+            if (target[j] >= LeastRoom * gap[PlaceOf(j)])
+                continue;
+            var (low, high) = (j, j);
+            var (room, need) = (target[j], wish[j]);
+            while (room < LeastRoom * need && (low > 0 || high < Count - 1))
+            {
+                if (high < Count - 1)
+                {
+                    high++;
+                    (room, need) = (room + target[high], need + wish[high]);
+                }
+
+                if (low > 0 && room < LeastRoom * need)
+                {
+                    low--;
+                    (room, need) = (room + target[low], need + wish[low]);
+                }
+            }
+
+            if (room < LeastRoom * need)
+                return false;
+            for (var k = low; k <= high; k++)
+            {
+                if (mass[PlaceOf(k)] > LightMass)
+                    return false;
+                repairedMass += mass[PlaceOf(k)];
+                target[k] = wish[k] * (room / need);
+                repaired[k] = true;
+            }
+
+            j = high;
+        }
+
+        var position = 0.0;
+        for (var lane = 0; lane <= Lanes; lane++)
+        {
+            endBefore[lane] = end[lane];
+            // Nodes within a repaired stretch stand where the widths put them, all others where Newton's step does.
+            var node = lane * rows;
+            var inside = node > 0 && node < Count && repaired[node] && repaired[node - 1];
+            end[lane] = inside ? position : end[lane] + endChange[lane];
+            position = end[lane];
+            for (var row = 0; row < rows && lane < Lanes; row++)
+                position += target[node + row];
+        }
+
+        for (var j = 0; j < Count; j++)
+        {
+            var place = PlaceOf(j);
+            var relative = change[place] / gap[place];
+            gapBefore[place] = gap[place];
+            dual[place] = Math.Max(1 - dual[place] * relative, LeastDualFactor * dual[place]) * (target[j] / gap[place]);
+            gap[place] = target[j];
+        }
+
+        return true;
     }
 
     private void Retreat(int group)

@@ -112,24 +112,44 @@ internal sealed class QuantileRun : FlowRun
             report.Iterations, report.Residual, null, distance, report.Converged ? null : FailureOf(report), WarningOf(scaled, effective, squeezed));
     }
 
-    // From where the nodes are, or from the guess at the start and where that fails.
+    // From where the nodes are; at the start, and where that fails, from the guess of the least energy.
     private MinimisationReport Minimise(double step)
     {
         if (StepsTaken == 0)
         {
-            guess.MoveNodes(solver, cells, step);
+            Guess(step);
             return solver.Minimise(step);
         }
 
         var report = solver.Minimise(step);
         if (report.Converged)
             return report;
-        widthsBefore.CopyTo(solver.Gap);
-        endsBefore.CopyTo(solver.Ends);
+        GoBack();
         QuantileTransfer.WriteDensity(solver, profile, scratch, cells);
-        guess.MoveNodes(solver, cells, step);
+        Guess(step);
         var again = solver.Minimise(step);
         return again with { Iterations = report.Iterations + again.Iterations };
+    }
+
+    private void Guess(double step)
+    {
+        var here = solver.EnergyOf(step);
+        guess.MoveNodes(solver, cells, step, driftFirst: false);
+        var nearEquilibrium = solver.EnergyOf(step);
+        GoBack();
+        guess.MoveNodes(solver, cells, step, driftFirst: true);
+        var drifted = solver.EnergyOf(step);
+        if (drifted <= nearEquilibrium && drifted <= here)
+            return;
+        GoBack();
+        if (nearEquilibrium <= here)
+            guess.MoveNodes(solver, cells, step, driftFirst: false);
+    }
+
+    private void GoBack()
+    {
+        widthsBefore.CopyTo(solver.Gap);
+        endsBefore.CopyTo(solver.Ends);
     }
 
     // BDF2 with steps τ now and τ/ω before, as one implicit Euler step of length τ(1 + ω)/(1 + 2ω) from ((1 + ω)² xₙ − ω² xₙ₋₁)/(1 + 2ω).

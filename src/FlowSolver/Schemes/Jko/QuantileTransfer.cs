@@ -61,13 +61,11 @@ internal static class QuantileTransfer
         for (var cell = first; cell <= last; cell++)
         {
             var entry = EquilibriumProfile.Stride * profile.Wrap(cell);
-            var (l, r) = (profile.Table[entry], profile.Table[entry + 1]);
-            var part = cell == first ? below * EquilibriumProfile.Share(l, r, s, 1, 1)
+            var part = cell == first ? cellWidth * profile.ShareOf(entry, s, 1, below / cellWidth)
                 : cell < last ? cellWidth
-                : adjacent ? (width - below) * EquilibriumProfile.Share(l, r, 0, t, 1)
-                : cellWidth * EquilibriumProfile.Share(l, r, 0, t, t);
+                : cellWidth * profile.ShareOf(entry, 0, t, adjacent ? (width - below) / cellWidth : t);
             part *= Math.Exp(profile.Table[entry + 2] - level) / total;
-            destination[profile.Wrap(cell)] += mass * EquilibriumProfile.Share(left, right, place, Math.Min(place + part, 1), part);
+            destination[profile.Wrap(cell)] += mass * EquilibriumProfile.RationalShare(left, right, place, Math.Min(place + part, 1), part);
             place = Math.Min(place + part, 1);
         }
     }
@@ -83,8 +81,9 @@ internal static class QuantileTransfer
         if (last <= first)
         {
             var entry = EquilibriumProfile.Stride * profile.Wrap(first);
-            var share = EquilibriumProfile.Share(profile.Table[entry], profile.Table[entry + 1], s, s + width / profile.Axis.Width, 1);
-            return Math.Log(solver.Mass[at] / (width * share)) - profile.Table[entry + 2];
+            var scaled = width / profile.Axis.Width;
+            var share = profile.ShareOf(entry, s, s + scaled, scaled) * profile.Axis.Width;
+            return Math.Log(solver.Mass[at] / share) - profile.Table[entry + 2];
         }
 
         var (mass, level, _, _) = profile.MassAcross(first, s, last, to / profile.Axis.Width - last, width);
