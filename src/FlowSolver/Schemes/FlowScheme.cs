@@ -35,7 +35,7 @@ public readonly record struct StepReport(
 /// <item>Derive its <see cref="FlowRun"/>, which holds all working memory: a step allocates nothing.</item>
 /// <item>Add one row to <see cref="SchemeCatalogue"/>.</item>
 /// <item>Add one test class that runs the shared conformance suite on it, with the mutation that you tried and saw fail.</item>
-/// <item>Add its source to the bibliography.</item>
+/// <item>Add its source to the bibliography, <c>src/FlowSolver/Sources.md</c>.</item>
 /// </list>
 /// Command line, tables, figures and page find it by the catalogue.
 /// </summary>

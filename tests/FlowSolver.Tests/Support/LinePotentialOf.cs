@@ -3,7 +3,7 @@ using FlowSolver.Problems;
 namespace FlowSolver.Tests.Support;
 
 /// <summary>A potential on the line from a function; slope and curvature by central differences of step 1e-4 where they are not given.</summary>
-public sealed class LinePotentialOf(Func<double, double> value, Func<double, double>? slope = null, IReadOnlyList<Kink>? kinks = null) : Potential
+public sealed class LinePotentialOf(Func<double, double> height, Func<double, double>? slope = null, IReadOnlyList<Kink>? kinks = null) : Potential
 {
     public override int Dimension => 1;
 
@@ -13,10 +13,10 @@ public sealed class LinePotentialOf(Func<double, double> value, Func<double, dou
 
     public override IReadOnlyList<Kink> FindKinks(Interval interval) => kinks ?? [];
 
-    public override void Value(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> target)
+    public override void Value(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> value)
     {
         for (var i = 0; i < x.Length; i++)
-            target[i] = value(x[i]);
+            value[i] = height(x[i]);
     }
 
     public override void Gradient(ReadOnlySpan<double> x, ReadOnlySpan<double> y, Span<double> gradientX, Span<double> gradientY)
@@ -28,8 +28,8 @@ public sealed class LinePotentialOf(Func<double, double> value, Func<double, dou
     public override void Jet(ReadOnlySpan<double> x, ReadOnlySpan<double> y, PotentialJet target)
     {
         for (var i = 0; i < x.Length; i++)
-            (target.Value[i], target.GradientX[i], target.HessianXX[i]) = (value(x[i]), Slope(x[i]), (Slope(x[i] + 1e-4) - Slope(x[i] - 1e-4)) / 2e-4);
+            (target.Value[i], target.GradientX[i], target.HessianXX[i]) = (height(x[i]), Slope(x[i]), (Slope(x[i] + 1e-4) - Slope(x[i] - 1e-4)) / 2e-4);
     }
 
-    private double Slope(double x) => slope is not null ? slope(x) : (value(x + 1e-4) - value(x - 1e-4)) / 2e-4;
+    private double Slope(double x) => slope is not null ? slope(x) : (height(x + 1e-4) - height(x - 1e-4)) / 2e-4;
 }
