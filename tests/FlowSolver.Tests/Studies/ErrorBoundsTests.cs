@@ -48,7 +48,7 @@ public class ErrorBoundsTests
 
     /// <summary>
     /// 600 random Gaussian targets (up to three curvatures, condition up to 30), random Gaussian starts, random steps over and beyond the allowed range: each chain's law and its W2 in closed form, and no bound is below at any of 40 steps. The bounds to the exact flow included.
-    /// Mutations tried: 2Mτ[E(ρₖ) − E(Pρₖ₋₁)] without the 2; contraction (1 + 3mγ) for the implicit chain; the slope bound with ¼ for ½.
+    /// Mutations tried: the rise 2Mτ[E(ρₖ) − E(Pρₖ₋₁)] left out; contraction (1 + 3mγ) for the implicit chain; the slope bound with another factor τ.
     /// </summary>
     [Fact]
     public void Steps_RandomGaussians_AreNeverBelowTheError()
@@ -171,7 +171,7 @@ public class ErrorBoundsTests
         _ => (OnGrid(new Problem(new PlanePotential(1.5, 0.4, 1, 0.05), 0.5, new Domain(new Interval(-5, 5), new Interval(-5, 5)), new GaussianStart(0.7, 0.2, -0.5, 0.4)), 64), TimePlan.Even(0.1, 0.4, 2)),
     };
 
-    /// <summary>On grids, convex but not quadratic: every bound that is drawn stays above the measured W2 at every step and, for the a-posteriori bound, between steps too. Mutation tried: the bend left out between steps.</summary>
+    /// <summary>On grids, convex but not quadratic: every bound that is drawn stays above the measured W2 at every step and, for the a-posteriori bound, between steps too. Mutation tried: W2² of the exact flow's contraction with e^(−3mt).</summary>
     [Theory]
     [MemberData(nameof(ConvexCases))]
     public void Of_ConvexLandscapes_IsAboveTheMeasuredError(string name)
@@ -218,6 +218,17 @@ public class ErrorBoundsTests
                 before = now;
             }
         }
+    }
+
+    /// <summary>Between steps: squares go over linearly, and the bend comes on top as s(1 − s). Mutation tried: the bend left out.</summary>
+    [Fact]
+    public void At_BetweenSteps_IsLinearInSquaresPlusTheBend()
+    {
+        var curve = new BoundCurve("a", "b", BoundTarget.ExactFlow, "", "", "", null, [0, 0.5, 1.0], [0, 1, 4], [0, 0.4, 0.8]);
+        Assert.Equal(Math.Sqrt(0.25 * 1 + 0.1875 * 0.4), curve.At(0.125), 1e-15);
+        Assert.Equal(Math.Sqrt(0.5 * 1 + 0.5 * 4 + 0.25 * 0.8), curve.At(0.75), 1e-15);
+        Assert.Equal(2, curve.At(1), 1e-15);
+        Assert.Contains("time was 1.5", Assert.Throws<ArgumentOutOfRangeException>(() => curve.At(1.5)).Message, StringComparison.Ordinal);
     }
 
     /// <summary>A bound whose assumption fails has no values and says why. Mutation tried: convexity not asked for.</summary>

@@ -9,19 +9,24 @@ namespace FlowSolver.Schemes.Splitting;
 /// moving mass to cell centres in between.
 /// </summary>
 /// <remarks>
-/// The normal density is cut in two: each mass is spread with variance 1.15 squared cells (16 weights an axis, made of two exponentials
-/// as in L. Greengard, J.-Y. Lee, SIAM Rev. 46 (2004) 443-454), and the rest of the variance is added by <see cref="GaussianConvolution"/> on the grid.
-/// Mass, mean and variance of each spread mass are right to 1e-8 at worst, and to 3e-9 on average over places. A variance between 1.15
-/// and 2.84 squared cells is spread at once with 24 weights; one below 1.15, which the grid cannot carry as a normal density, with three weights
-/// of the right mass and mean and, where three positive weights allow it, variance. Weights are positive and of sum 1. The result does not depend on
-/// the number of threads. Not safe for use from two threads at once.
+/// The normal density is cut in two: each mass is spread with one part of the variance (weights made of two exponentials as in L. Greengard, J.-Y. Lee, SIAM Rev. 46 (2004) 443-454), and the rest is added by
+/// <see cref="GaussianConvolution"/> on the grid. From 9 squared cells on the part spread is 1.15 with 16 weights an axis; below, as much as 24 weights hold. Mass and mean are exact, the variance is right to 1e-7 of the part spread at worst and 3e-9
+/// on average over places; a single mass shows a ripple of at most 1e-7 of itself, which masses at many places average out. A variance below 1.15, which the grid cannot carry as a normal density, is spread with three weights
+/// of the right mass and mean and, where three positive weights allow it, variance. Weights are positive and of sum 1. The result does not depend on the number of threads. Not safe for use from two threads at once.
 /// </remarks>
 internal sealed class GaussianSpreading
 {
     /// <summary>Least variance, in squared cells, that the grid carries as a normal density.</summary>
     public const double LeastVariance = 1.15;
 
-    private const double WholeBelow = LeastVariance + GaussianKernel.SampledFrom * GaussianKernel.SampledFrom;
+    private const double LeastRest = GaussianKernel.SampledFrom * GaussianKernel.SampledFrom;
+
+    // What 24 weights hold: to six deviations, or well beyond when it is only a part.
+    private const double WholeBelow = 3.4;
+    private const double WidePart = 2.84;
+
+    // From here on a part of 1.15 and the rest together are smooth on the grid: 1/(1/1.15 + 1/7.85) = 1.
+    private const double NarrowFrom = 9;
     private const int Pad = 16;
     private const int StripRows = 32;
     private const double Nothing = 1e-280;
@@ -282,10 +287,9 @@ internal sealed class GaussianSpreading
                 return;
             }
 
-            var whole = variance < WholeBelow;
-            (Taps, Vectors) = whole ? (24, 3) : (16, 2);
-            spread = whole ? variance : LeastVariance;
-            RestVariance = whole ? 0 : variance - LeastVariance;
+            (Taps, Vectors) = variance < NarrowFrom ? (24, 3) : (16, 2);
+            spread = variance < WholeBelow ? variance : variance < NarrowFrom ? Math.Min(WidePart, variance - LeastRest) : LeastVariance;
+            RestVariance = variance < WholeBelow ? 0 : variance - spread;
             for (var k = 0; k < Taps; k++)
             {
                 double distance = k - (Taps / 2 - 1);

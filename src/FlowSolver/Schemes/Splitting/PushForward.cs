@@ -45,6 +45,7 @@ internal sealed class PushForwardOnLine
         foreach (var point in chain.Breakpoints.Concat(chain.MovedEnds))
             MarkRough(Place(chain.At(point)));
         var rising = 0;
+        var smooth = new List<(double From, double To, double Low, double High)>();
         for (var i = 0; i + 1 < x.Length; i++)
         {
             if (x[i + 1] - x[i] <= 4 * margin && x[i + 1] - x[i] < 0.5 * axis.Width)
@@ -61,8 +62,38 @@ internal sealed class PushForwardOnLine
             if (rising * direction < 0)
                 MarkRough(low);
             rising = direction == 0 ? rising : direction;
-            AddPieces(x[i], x[i + 1], low, high, position => Place(chain.At(position)));
+            smooth.Add((x[i], x[i + 1], low, high));
         }
+
+        var crossings = new List<(double Low, double High, double ValueLow, double ValueHigh, long Edge)>();
+        foreach (var (from, to, low, high) in smooth)
+        {
+            for (var edge = FirstEdge(low, high); edge < EndEdge(low, high); edge++)
+                crossings.Add((from, to, low, high, edge));
+        }
+
+        var solved = FindCrossings(chain, axis, crossings);
+        var next = 0;
+        foreach (var (from, to, low, high) in smooth)
+        {
+            var (first, end) = (FirstEdge(low, high), EndEdge(low, high));
+            var up = high >= low;
+            var start = from;
+            for (var k = 0L; k <= end - first; k++)
+            {
+                var cell = up ? first - 1 + k : end - 1 - k;
+                var stop = k == end - first ? to : Math.Max(start, solved[next + (int)(up ? k : end - first - 1 - k)]);
+                if (stop > start)
+                    pieces.Add((start, stop, DensityInterpolation.Wrap((int)cell, cells, periodic)));
+                start = stop;
+            }
+
+            next += (int)(end - first);
+        }
+
+        // Edges strictly inside the image of an interval.
+        static long FirstEdge(double a, double b) => (long)Math.Floor(Math.Min(a, b)) + 1;
+        static long EndEdge(double a, double b) => Math.Max(FirstEdge(a, b), (long)Math.Ceiling(Math.Max(a, b)));
     }
 
     /// <summary>Writes the image of a density.</summary>
@@ -119,44 +150,52 @@ internal sealed class PushForwardOnLine
             rough[DensityInterpolation.Wrap((int)Math.Floor(place), cells, periodic)] = true;
     }
 
-    private void AddPieces(double from, double to, double imageFrom, double imageTo, Func<double, double> map)
+    // The places in the intervals at which the image crosses an edge between cells: all at once, by secant steps kept inside their brackets.
+    private static double[] FindCrossings(ChainOnLine chain, Axis axis, List<(double Low, double High, double ValueLow, double ValueHigh, long Edge)> wanted)
     {
-        var first = (long)Math.Floor(Math.Min(imageFrom, imageTo));
-        var last = (long)Math.Floor(Math.Max(imageFrom, imageTo));
-        // An image that ends on an edge between cells touches the next one only in a point.
-        if (last > first && Math.Max(imageFrom, imageTo) == last)
-            last--;
-        var up = imageTo >= imageFrom;
-        var start = from;
-        for (var k = 0L; k <= last - first; k++)
+        var count = wanted.Count;
+        var (low, high) = (new double[count], new double[count]);
+        var (valueLow, valueHigh) = (new double[count], new double[count]);
+        var active = new int[count];
+        for (var i = 0; i < count; i++)
         {
-            var cell = up ? first + k : last - k;
-            var end = k == last - first ? to : Solve(start, to, up ? cell + 1 : cell);
-            if (end > start)
-                pieces.Add((start, end, DensityInterpolation.Wrap((int)cell, cells, periodic)));
-            start = end;
+            active[i] = i;
+            (low[i], high[i]) = (wanted[i].Low, wanted[i].High);
+            (valueLow[i], valueHigh[i]) = (wanted[i].ValueLow - wanted[i].Edge, wanted[i].ValueHigh - wanted[i].Edge);
         }
 
-        double Solve(double low, double high, double edge)
+        var (tried, image) = (new double[count], new double[count]);
+        for (var round = 0; round < 90 && count > 0; round++)
         {
-            // Secant steps kept inside the bracket.
-            var (valueLow, valueHigh) = (map(low) - edge, map(high) - edge);
-            for (var k = 0; k < 80; k++)
+            var kept = 0;
+            for (var k = 0; k < count; k++)
             {
-                var middle = k % 3 == 2 ? 0.5 * (low + high) : low - valueLow * (high - low) / (valueHigh - valueLow);
-                if (!(middle > low && middle < high))
-                    break;
-                var value = map(middle) - edge;
-                if (value == 0)
-                    return middle;
-                if (value > 0 == valueHigh > 0)
-                    (high, valueHigh) = (middle, value);
-                else
-                    (low, valueLow) = (middle, value);
+                var i = active[k];
+                var middle = round % 3 == 2 ? 0.5 * (low[i] + high[i]) : low[i] - valueLow[i] * (high[i] - low[i]) / (valueHigh[i] - valueLow[i]);
+                if (!(middle > low[i] && middle < high[i]))
+                    middle = 0.5 * (low[i] + high[i]);
+                if (!(middle > low[i] && middle < high[i]) || valueLow[i] == 0 || valueHigh[i] == 0)
+                    continue;
+                active[kept] = i;
+                tried[kept++] = middle;
             }
 
-            return Math.Abs(valueLow) < Math.Abs(valueHigh) ? low : high;
+            count = kept;
+            chain.Map(tried.AsSpan(0, count), image.AsSpan(0, count));
+            for (var k = 0; k < count; k++)
+            {
+                var i = active[k];
+                var value = (image[k] - axis.Interval.From) / axis.Width - wanted[i].Edge;
+                if (value > 0 == valueHigh[i] > 0)
+                    (high[i], valueHigh[i]) = (tried[k], value);
+                else
+                    (low[i], valueLow[i]) = (tried[k], value);
+            }
         }
+
+        for (var i = 0; i < low.Length; i++)
+            low[i] = Math.Abs(valueLow[i]) < Math.Abs(valueHigh[i]) ? low[i] : high[i];
+        return low;
     }
 }
 

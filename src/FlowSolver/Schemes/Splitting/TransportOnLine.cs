@@ -1,3 +1,4 @@
+using System.Runtime.CompilerServices;
 using FlowSolver.Problems;
 
 namespace FlowSolver.Schemes.Splitting;
@@ -352,6 +353,7 @@ internal sealed class ProximalOnLine : TransportOnLine
         }
     }
 
+    [SkipLocalsInit]
     public override void Map(ReadOnlySpan<double> x, Span<double> mapped)
     {
         Span<double> low = stackalloc double[Chunk];
@@ -364,7 +366,8 @@ internal sealed class ProximalOnLine : TransportOnLine
             var part = Math.Min(Chunk, x.Length - first);
             var targets = x.Slice(first, part);
             var y = mapped.Slice(first, part);
-            var k = 0;
+            // The vertex at which the slope passes the first point; the next ones are near.
+            var k = Math.Max(0, ~Array.BinarySearch(switchAt, targets[0]));
             for (var i = 0; i < part; i++)
                 k = Bracket(targets[i], k, ref low[i], ref high[i], ref y[i]);
             for (var iteration = 0; iteration < 100; iteration++)
