@@ -1,6 +1,5 @@
 using BenchmarkDotNet.Attributes;
 using FlowSolver.Foundation;
-using FlowSolver.Problems;
 using FlowSolver.Schemes.ExactFlow;
 using FlowSolver.Studies;
 
