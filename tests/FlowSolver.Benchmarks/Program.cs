@@ -1,7 +1,7 @@
 using BenchmarkDotNet.Running;
 using FlowSolver.Benchmarks;
 
-// "peers" and "growth" need no BenchmarkDotNet: they measure ratios in one run. Anything else is handed to it.
+// "peers" and "growth" and the like need no BenchmarkDotNet: they measure ratios in one run. Anything else is handed to it.
 switch (args)
 {
     case ["peers", .. var names]:
@@ -10,6 +10,8 @@ switch (args)
         return PeerComparison.RunGrowth(names);
     case ["hard-starts", .. var names]:
         return HardStarts.Run(names);
+    case ["calibration"]:
+        return Calibration.Run();
     default:
         BenchmarkSwitcher.FromAssembly(typeof(Program).Assembly).Run(args);
         return 0;
