@@ -14,6 +14,7 @@ internal static class PeerRows
         JkoPlaneBenchmarks.Middle,
         JkoPlaneBenchmarks.Large,
         PlaneTransportBenchmarks.Peer,
+        .. LangevinBenchmarks.Peers,
     ];
 
     public static IReadOnlyList<GrowthRow> Growth { get; } =

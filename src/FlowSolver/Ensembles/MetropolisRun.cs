@@ -87,7 +87,7 @@ internal sealed class MetropolisRun : TiledRun
         }
 
         // −ln of a uniform number: the proposal is accepted when R plus it is above 0.
-        new ExponentialDraws(Seed, StreamPurpose.Acceptance, StreamStep).Fill((ulong)first, score);
+        AcceptanceDraws.Fill(new StreamKey(Seed, StreamPurpose.Acceptance, StreamStep), (ulong)first, score);
         DrawNormals(StreamPurpose.Noise, first, proposalX);
         Propose(FoldX, Problem.Domain.X, x, aimX, proposalX, placeX, score);
         if (IsPlane)

@@ -38,7 +38,9 @@ public sealed class ProximalMap
     private readonly Interval? axisY;
     private readonly double allowed;
     private readonly double largestSlope;
+    private readonly double largestThird;
     private readonly Stop[] stops;
+    private readonly Stop[] inner;
     private readonly PotentialForm? closedForm;
     private readonly Domain domain;
     private readonly PlaneStructure? structure;
@@ -63,6 +65,8 @@ public sealed class ProximalMap
         // Half as much again, since a sampled largest value is not the largest.
         largestSlope = 1.5 * survey.LargestSlope;
         stops = axisY is null ? FindStops() : [];
+        inner = [.. stops.Where(stop => axisX.Ends == AxisEnds.Periodic || (stop.Position > axisX.From && stop.Position < axisX.To))];
+        largestThird = axisY is null ? SurveyThird() : 0;
         closedForm = axisY is null ? ClosedForms.Usable(potential, axisX) : null;
         structure = PlaneStructure.Find(potential, domain);
         if (structure is null)
@@ -176,7 +180,7 @@ public sealed class ProximalMap
         }
 
         var padded = (x.Length + 7) & ~7;
-        var storage = AlignedScratch.Of(stackalloc double[8 * Chunk + AlignedScratch.Slack], 8 * Chunk);
+        var storage = AlignedScratch.Of(stackalloc double[10 * Chunk + AlignedScratch.Slack], 10 * Chunk);
         var point = storage[..padded];
         x.CopyTo(point);
         // Padding repeats the last point: it costs nothing more and cannot fail alone.
@@ -188,15 +192,29 @@ public sealed class ProximalMap
         var slope = storage.Slice(5 * Chunk, padded);
         var curvature = storage.Slice(6 * Chunk, padded);
         var periodic = axisX.Ends == AxisEnds.Periodic;
-        var wrapped = periodic ? storage.Slice(7 * Chunk, padded) : position;
+        var wrapped = storage.Slice(7 * Chunk, padded);
         var fold = new AxisFold(axisX);
-        Bracket(t, point, position, low, high);
         var jet = new PotentialJet { Value = value, GradientX = slope, HessianXX = curvature };
+        var state = storage.Slice(8 * Chunk, padded);
+        var direct = storage.Slice(9 * Chunk, padded);
+        if (inner.Length > 0)
+        {
+            state.Clear();
+        }
+        else if (Newton(t, point, direct, wrapped, state, jet))
+        {
+            if (periodic)
+                fold.FoldInPlace(direct);
+            direct[..x.Length].CopyTo(target);
+            return 0;
+        }
+
+        Bracket(t, point, position, low, high);
         for (var iteration = 0; iteration < MostIterations; iteration++)
         {
             if (periodic)
                 fold.Fold(position, wrapped);
-            potential.Jet(wrapped, [], jet);
+            potential.Jet(periodic ? wrapped : position, [], jet);
             if (Improve(t, iteration > PlainIterations && iteration % 2 == 0, point, position, low, high, slope, curvature))
                 break;
         }
@@ -204,13 +222,93 @@ public sealed class ProximalMap
         var missed = 0;
         for (var i = 0; i < x.Length; i++)
         {
-            // The bracket's bounds are equal where the point is settled (see Improve).
-            if (low[i] != high[i])
+            // Whoever was found without a bracket is kept: an answer does not depend on who is in the same chunk. The bracket's bounds are equal where
+            // the point is settled (see Improve).
+            var found = state[i] > 0;
+            if (!found && low[i] != high[i])
                 missed++;
-            target[i] = axisX.Fold(position[i]);
+            target[i] = axisX.Fold(found ? direct[i] : position[i]);
         }
 
         return missed;
+    }
+
+    // Newton's method without a bracket, for points where it just works: no kinks, the objective convex on the way, the answer inside the walls. A step δ
+    // leaves a residual of at most t·max|V‴|·δ²/2, so that the last one need not be looked at again. State: 1 found, −1 left to the bracket. True when all
+    // were found.
+    private bool Newton(double t, Span<double> point, Span<double> position, Span<double> wrapped, Span<double> state, PotentialJet jet)
+    {
+        var periodic = axisX.Ends == AxisEnds.Periodic;
+        var enough = Vector512.Create(Math.Sqrt(2 * allowed / (t * largestThird)));
+        ref var points = ref MemoryMarshal.GetReference(point);
+        ref var positions = ref MemoryMarshal.GetReference(position);
+        ref var states = ref MemoryMarshal.GetReference(state);
+        ref var slopes = ref MemoryMarshal.GetReference(jet.GradientX);
+        ref var curvatures = ref MemoryMarshal.GetReference(jet.HessianXX);
+        var step = Vector512.Create(t);
+        var zero = Vector512<double>.Zero;
+        var one = Vector512<double>.One;
+        point.CopyTo(position);
+        state.Clear();
+        for (var iteration = 0; iteration < PlainIterations; iteration++)
+        {
+            if (periodic)
+                new AxisFold(axisX).Fold(position, wrapped);
+            potential.Jet(periodic ? wrapped : position, [], jet);
+            var running = Vector512<long>.Zero;
+            for (nuint i = 0; i < (nuint)point.Length; i += 8)
+            {
+                var y = Vector512.LoadUnsafe(ref positions, i);
+                var before = Vector512.LoadUnsafe(ref states, i);
+                var force = Vector512.FusedMultiplyAdd(step, Vector512.LoadUnsafe(ref slopes, i), y - Vector512.LoadUnsafe(ref points, i));
+                var stiffness = Vector512.FusedMultiplyAdd(step, Vector512.LoadUnsafe(ref curvatures, i), one);
+                var move = force / stiffness;
+                var open = Vector512.Equals(before, zero);
+                var convex = Vector512.GreaterThan(stiffness, Vector512.Create(1e-3));
+                var after = Vector512.ConditionalSelect(Vector512.LessThanOrEqual(Vector512.Abs(move), enough), one, zero);
+                after = Vector512.ConditionalSelect(convex, after, -one);
+                after = Vector512.ConditionalSelect(open, after, before);
+                after.StoreUnsafe(ref states, i);
+                Vector512.ConditionalSelect(open & convex, y - move, y).StoreUnsafe(ref positions, i);
+                running |= Vector512.Equals(after, zero).AsInt64();
+            }
+
+            if (Vector512.EqualsAll(running, Vector512<long>.Zero))
+                break;
+        }
+
+        var from = Vector512.Create(periodic ? double.NegativeInfinity : axisX.From);
+        var to = Vector512.Create(periodic ? double.PositiveInfinity : axisX.To);
+        var lost = Vector512<long>.Zero;
+        for (nuint i = 0; i < (nuint)point.Length; i += 8)
+        {
+            var y = Vector512.LoadUnsafe(ref positions, i);
+            var found = Vector512.GreaterThan(Vector512.LoadUnsafe(ref states, i), zero)
+                & Vector512.GreaterThanOrEqual(y, from) & Vector512.LessThanOrEqual(y, to);
+            Vector512.ConditionalSelect(found, one, -one).StoreUnsafe(ref states, i);
+            lost |= ~found.AsInt64();
+        }
+
+        return Vector512.EqualsAll(lost, Vector512<long>.Zero);
+    }
+
+    // The largest |V‴| on the domain from differences of V″, doubled since it is sampled.
+    private double SurveyThird()
+    {
+        const int samples = 4096;
+        var x = new double[samples + 1];
+        for (var i = 0; i <= samples; i++)
+            x[i] = axisX.From + (i + 0.5) / (samples + 1) * axisX.Length;
+        double[] value = new double[x.Length], slope = new double[x.Length], curvature = new double[x.Length];
+        potential.Jet(x, [], new PotentialJet { Value = value, GradientX = slope, HessianXX = curvature });
+        var largest = 0.0;
+        for (var i = 0; i < samples; i++)
+        {
+            var change = Math.Abs(curvature[i + 1] - curvature[i]) * (samples + 1) / axisX.Length;
+            largest = double.IsFinite(change) ? Math.Max(largest, change) : double.PositiveInfinity;
+        }
+
+        return 2 * largest;
     }
 
     // Settles points whose answer is a stop (low = high = position) and brackets the others between stops, where V is smooth.
