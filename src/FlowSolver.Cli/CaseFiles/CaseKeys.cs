@@ -150,8 +150,8 @@ public static class CaseKeys
         new("ensemble.walkers", CaseValueKind.WholeNumber, "Walkers in each ensemble.", "100000") { Default = "100000", Least = 1, Most = CaseLimits.Walkers.Most },
         new("ensemble.seed", CaseValueKind.WholeNumber, "Seed of the random numbers: the same seed gives the same walkers.", "1")
             { Default = "1", Least = 0, Most = long.MaxValue },
-        new("tolerances.dual_gap", CaseValueKind.Number, "Largest relative duality gap of a certified step; a step above it ends the run with status 3.", "1e-5")
-            { Default = "1e-5", IsPositive = true },
+        new("tolerances.dual_gap", CaseValueKind.Number, "Largest duality gap of a certified step in two dimensions, relative to W2^2/(2 step); a step above it ends the method with status 3.", "1e-3")
+            { Default = "1e-3", IsPositive = true },
         new("labels.length", CaseValueKind.Text, "Unit of length.", "\"µm\"") { Default = "\"\"" },
         new("labels.energy", CaseValueKind.Text, "Unit of energy.", "\"kT\"") { Default = "\"\"" },
         new("labels.time", CaseValueKind.Text, "Unit of time.", "\"s\"") { Default = "\"\"" },

@@ -1,5 +1,6 @@
 using FlowSolver.Cli.CaseFiles;
 using FlowSolver.Schemes;
+using FlowSolver.Schemes.Jko;
 
 namespace FlowSolver.Cli.Commands;
 
@@ -7,5 +8,10 @@ namespace FlowSolver.Cli.Commands;
 internal static class CaseMethods
 {
     /// <summary>The scheme of that name. Names have been checked when the case was read.</summary>
-    public static FlowScheme Scheme(string name, CaseFile read) => SchemeCatalogue.Find(name)!;
+    public static FlowScheme Scheme(string name, CaseFile read)
+        => SchemeCatalogue.Find(name) switch
+        {
+            JkoScheme jko => new JkoScheme(read.Tolerances.DualGap, jko.Parcels),
+            var scheme => scheme!,
+        };
 }

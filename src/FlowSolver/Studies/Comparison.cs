@@ -269,11 +269,15 @@ public static class Comparison
                 var done = track.Run.Advance(length);
                 track.Iterations += done.Iterations;
                 var density = track.Run.Snapshot();
+                // Whatever a method does in extreme cases, no number that is none gets into a table.
+                if (done.Failure is null && !Array.TrueForAll(density.Values, double.IsFinite))
+                    done = done with { Failure = "The density was not a number in some cell; a shorter step or more cells may help." };
                 var time = k == leaps - 1 ? plan.ReportTimes[report] : track.Run.Time;
-                if (track.Shown)
+                var energy = problem.FreeEnergy(density.Values);
+                if (track.Shown && double.IsFinite(energy))
                 {
                     track.Steps.Add(new StepRow(track.Scheme.Traits.Name, track.Run.StepsTaken, time, done.Iterations,
-                        done.Residual, done.DualGap, done.StepDistance, problem.FreeEnergy(density.Values)));
+                        done.Residual, done.DualGap, done.StepDistance, energy));
                 }
 
                 if (done.Warning is not null && track.Warned.Add(done.Warning))

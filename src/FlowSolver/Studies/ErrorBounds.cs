@@ -219,12 +219,14 @@ public static class ErrorBounds
                 using var run = scheme!.Begin(problem, start, team);
                 var report = run.Advance(step);
                 var after = run.Snapshot();
-                whyNoStep = report.Failure;
-                // The lower bound of the distance makes the bound on the error the larger.
-                var moved = DensityDistance.Between(start, after, team)?.Low ?? double.NaN;
-                square = BoundSteps.JkoFiniteEnergySquare(mobility, step, problem.FreeEnergy(start.Values), problem.FreeEnergy(after.Values), moved);
-                if (double.IsNaN(square))
-                    whyNoStep ??= "The first step's distance could not be computed.";
+                whyNoStep = report.Failure ?? (Array.TrueForAll(after.Values, double.IsFinite) ? null : "The first step gave no density.");
+                if (whyNoStep is null)
+                {
+                    // The lower bound of the distance makes the bound on the error the larger.
+                    var moved = DensityDistance.Between(start, after, team)?.Low ?? double.NaN;
+                    square = BoundSteps.JkoFiniteEnergySquare(mobility, step, problem.FreeEnergy(start.Values), problem.FreeEnergy(after.Values), moved);
+                    whyNoStep = double.IsNaN(square) ? "The first step's distance could not be computed." : null;
+                }
             }
 
             yield return Curve("jko-finite-energy", "jko", BoundTarget.ExactFlow, finite, GradientFlows, "convex V, equal steps", whyNoStep, Constant(square));

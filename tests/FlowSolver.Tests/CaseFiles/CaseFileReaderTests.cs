@@ -38,7 +38,7 @@ public class CaseFileReaderTests
         Assert.Equal(1000, file.Walkers);
         Assert.Equal(1UL, file.Seed);
         Assert.Null(file.Labels.Length);
-        Assert.Equal(1e-5, file.Tolerances.DualGap);
+        Assert.Equal(1e-3, file.Tolerances.DualGap);
         Assert.Empty(file.Warnings);
     }
 

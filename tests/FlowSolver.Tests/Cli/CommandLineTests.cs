@@ -179,6 +179,52 @@ public sealed class CommandLineTests : IDisposable
         Assert.False(File.Exists(target + ".unfinished"));
     }
 
+    [Fact]
+    public void Audit_RightAndWrongSamples_EndWithTheVerdictsStatus()
+    {
+        var path = Case(Quick.Replace("x^4/4 - x^2/2", "x^2", StringComparison.Ordinal));
+        // Equilibrium of V = x² at T = 1/2 is a normal density of variance 1/4; quantiles of it make samples without luck.
+        var right = Path.Combine(root, "right.csv");
+        File.WriteAllLines(right, ["x", .. Enumerable.Range(0, 4000).Select(k => (0.5 * MathNet.Numerics.Distributions.Normal.InvCDF(0, 1, (k + 0.5) / 4000)).ToString("R", CultureInfo.InvariantCulture))]);
+        var wrong = Path.Combine(root, "wrong.csv");
+        File.WriteAllLines(wrong, ["x", .. Enumerable.Range(0, 4000).Select(k => (0.6 * MathNet.Numerics.Distributions.Normal.InvCDF(0, 1, (k + 0.5) / 4000)).ToString("R", CultureInfo.InvariantCulture))]);
+        var (status, output, error) = Flow("audit", path, "--samples", right, "--out", Path.Combine(root, "a"), "--quiet");
+        Assert.True(status == ExitStatus.Done, error);
+        Assert.StartsWith("samples,time,count,w2,noise_w2_mean,noise_w2_p95,p_value,verdict", output, StringComparison.Ordinal);
+        (status, output, error) = Flow("audit", path, "--samples", wrong, "--time", "equilibrium", "--out", Path.Combine(root, "b"), "--quiet");
+        Assert.True(status == ExitStatus.Differs, error);
+        Assert.Contains("temperature", output, StringComparison.Ordinal);
+        Assert.Equal(output, File.ReadAllText(Path.Combine(root, "b", "audit.csv")));
+        Assert.Equal(ExitStatus.BadInput, Flow("audit", path, "--samples", wrong, "--samples", right, "--time", "1", "--out", Path.Combine(root, "c"), "--quiet").Status);
+        Assert.False(Directory.Exists(Path.Combine(root, "c")));
+    }
+
+    [Fact]
+    public void Relax_QuickCase_PrintsEquilibriumFirstThenTheGap()
+    {
+        var (status, output, error) = Flow("relax", Case(Quick), "--modes", "2", "--out", Path.Combine(root, "out"), "--quiet");
+        Assert.True(status == ExitStatus.Done, error);
+        var lines = output.Split('\n', StringSplitOptions.RemoveEmptyEntries);
+        Assert.StartsWith("mode,rate,timescale", lines[0], StringComparison.Ordinal);
+        Assert.StartsWith("0,0,,", lines[1], StringComparison.Ordinal);
+        // V = x⁴/4 − x²/2 at T = 1/2: 0.4229446 (sinc collocation; the grid of 64 cells and walls at ±3 leave an error of a few parts in a thousand).
+        Assert.InRange(double.Parse(lines[2].Split(',')[1], CultureInfo.InvariantCulture), 0.42, 0.426);
+    }
+
+    [Fact]
+    public void Suggest_Harmonic_FindsStepsThatKeepTheBias()
+    {
+        var (status, output, error) = Flow("suggest", Case(Quick.Replace("x^4/4 - x^2/2", "x^2", StringComparison.Ordinal)), "--bias", "0.02", "--methods", "split-proximal", "ula", "--out", Path.Combine(root, "out"), "--quiet");
+        Assert.True(status == ExitStatus.Done, error);
+        Assert.StartsWith("method,largest_step,stationary_bias_w2,transient_bias_w2", output, StringComparison.Ordinal);
+        foreach (var cells in output.Split('\n', StringSplitOptions.RemoveEmptyEntries).Skip(1).Select(line => line.Split(',')))
+        {
+            Assert.InRange(double.Parse(cells[1], CultureInfo.InvariantCulture), 1e-3, 1);
+            Assert.InRange(double.Parse(cells[2], CultureInfo.InvariantCulture), 0, 0.02);
+            Assert.InRange(double.Parse(cells[3], CultureInfo.InvariantCulture), 0, 0.02);
+        }
+    }
+
     // Three ways to stop a process from outside, at several moments: whatever stands under the result's name afterwards must be whole.
     [SkippableTheory]
     [InlineData("INT", 130)]
