@@ -18,7 +18,9 @@ internal static class SuggestCommand
         var aim = new Option<double?>("--aim") { Description = "W2 to equilibrium up to which steps and gradient evaluations are counted. Default: twice the bias.", HelpName = "E" };
         var methods = new Option<string[]>("--methods")
         {
-            Description = "Methods to look at: splitting schemes and samplers with a law on the grid. Default: all of them.", HelpName = "NAME", AllowMultipleArgumentsPerToken = true,
+            Description = "Methods to look at: splitting schemes and samplers with a law on the grid. Default: all of them.",
+            HelpName = "NAME",
+            AllowMultipleArgumentsPerToken = true,
         };
         var target = SharedOptions.Out("results/<case file's name>-suggest");
         var threads = SharedOptions.Threads();

@@ -57,7 +57,10 @@ public static class SuggestReport
         var verdict = new Verdict(result.Interrupted ? VerdictTone.Failed : found.Count == 0 ? VerdictTone.Attention : VerdictTone.Sound, headline,
             [.. found.Select(row => $"{row.Method}: a step of {Numbers.Short(row.Suggested!.Step, 3)}{time}"
                 + (row.Suggested.StationaryBias is { } s ? $", bias {Numbers.Short(s, 3)}{length} at equilibrium" : "") + (row.Suggested.TransientBias is { } t ? $" and at most {Numbers.Short(t, 3)}{length} on the way" : "")
-                + (row.AtDouble?.Worst is { } d ? $"; at twice the step {Numbers.Short(d, 3)}{length}" : "") + (row.StableStep is { } limit ? $"; unstable from {Numbers.Short(limit, 3)}{time} on" : "") + ".")]) { Word = result.Interrupted ? null : "steps" };
+                + (row.AtDouble?.Worst is { } d ? $"; at twice the step {Numbers.Short(d, 3)}{length}" : "") + (row.StableStep is { } limit ? $"; unstable from {Numbers.Short(limit, 3)}{time} on" : "") + ".")])
+        {
+            Word = result.Interrupted ? null : "steps",
+        };
         var page = new PageModel("suggest", title, $"What is the largest step whose bias stays under {Numbers.Short(result.Bias)}{length} in W2, at equilibrium and on the way there?", verdict,
             [.. found.Take(5).Select(row => new KeyNumber(row.Method, row.Suggested!.Step, labels.Time, "largest step"))], sections);
         return new StudyReport(page, [table], [table], figure is null ? [] : [figure], provenance, false, result.Interrupted);
