@@ -19,7 +19,18 @@ public sealed record SamplerTraits(string Name, string Summary, FlowScheme? Law,
 /// <param name="AcceptanceRate">Share of proposals accepted, for Metropolis-adjusted samplers; null elsewhere.</param>
 public readonly record struct EnsembleReport(string? Failure = null, string? Warning = null, double? AcceptanceRate = null);
 
-/// <summary>A way to advance walkers: a small immutable object with its options. See <see cref="SamplerCatalogue"/> for how one is found.</summary>
+/// <summary>
+/// A way to advance walkers: a small immutable object with its options. Adding one:
+/// <list type="number">
+/// <item>When a step is maps and Gaussian noise, derive from <see cref="RecipeSampler"/> and give the recipe; name the grid scheme of the same recipe as its
+/// law. That is all. Otherwise derive from this type, in a file of its own; its doc block gives: one sentence; the update formula with symbols tied to
+/// parameter names; the bias and its order; when it blows up; what happens at walls; cost of a step; source and departures.</item>
+/// <item>Derive its <see cref="EnsembleRun"/>, which holds all working memory: a step allocates nothing. Random numbers come from <see cref="RandomStreams"/> by
+/// the walker's number and the step, so that nothing depends on threads. A blow-up is reported as a failure before anything is infinite.</item>
+/// <item>Add one row to <see cref="SamplerCatalogue"/>: the shared tests then run it (same bytes, walls, circles, no allocation, its law on the grid).</item>
+/// <item>Add its stationary variance on a quadratic to the table in the tests, with the mutation that you tried and saw fail.</item>
+/// </list>
+/// </summary>
 public abstract class Sampler
 {
     /// <summary>What the sampler is.</summary>
