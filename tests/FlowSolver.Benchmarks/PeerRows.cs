@@ -11,6 +11,7 @@ internal static class PeerRows
         ExactFlowBenchmarks.Peer,
         RelaxationBenchmarks.Peer,
         GaussianBenchmarks.Peer,
+        JkoLineBenchmarks.Peer,
         JkoPlaneBenchmarks.Middle,
         JkoPlaneBenchmarks.Large,
         PlaneTransportBenchmarks.Peer,
@@ -20,6 +21,7 @@ internal static class PeerRows
     public static IReadOnlyList<GrowthRow> Growth { get; } =
     [
         ExactFlowBenchmarks.Growth,
+        JkoLineBenchmarks.Growth,
         JkoPlaneBenchmarks.Growth,
         PlaneTransportBenchmarks.Growth,
     ];

@@ -68,6 +68,21 @@ internal sealed class QuantileRun : FlowRun
     /// <summary>F − F(π) of the density that is a multiple of the equilibrium in each parcel, in units of energy; what a JKO step lowers.</summary>
     public double FreeEnergyExcess() => solver.FreeEnergyExcess();
 
+    /// <summary>Writes the masses of the parcels and the nodes between them, along the axis, positions counted from its lower end.</summary>
+    /// <param name="masses">Length the number of parcels.</param>
+    /// <param name="nodes">One more.</param>
+    public void WriteParcels(Span<double> masses, Span<double> nodes)
+    {
+        solver.WritePositions(scratch);
+        for (var j = 0; j < masses.Length; j++)
+        {
+            masses[j] = solver.Mass[solver.PlaceOf(j)];
+            nodes[j] = scratch[solver.PlaceOf(j)];
+        }
+
+        nodes[masses.Length] = solver.Ends[QuantileNewton.Lanes];
+    }
+
     /// <inheritdoc/>
     public override void WriteDensity(Span<double> destination)
     {
