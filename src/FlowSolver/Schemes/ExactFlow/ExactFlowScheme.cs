@@ -121,8 +121,8 @@ internal sealed class ExactFlowRun : FlowRun
             left = substep >= left ? 0 : left - substep;
         }
 
-        return lostMass > 1e-8
-            ? new StepReport(work, Failure: FormattableString.Invariant($"Rounding moved a share of {lostMass:g2} of the mass in this step; the result has lost its accuracy."))
+        return lostMass > Math.Max(1e-8, 10 * tolerance)
+            ? new StepReport(work, Failure: FormattableString.Invariant($"Rounding or the tolerance moved a share of {lostMass:g2} of the mass in this step; the result has lost its accuracy."))
             : new StepReport(work);
     }
 

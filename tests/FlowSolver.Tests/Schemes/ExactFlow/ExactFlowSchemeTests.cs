@@ -288,5 +288,8 @@ public sealed class ExactFlowSchemeTests : FlowSchemeConformance
         var few = loose.Advance(0.3).Iterations;
         Assert.True(few < 0.8 * many, $"{few} of {many}");
         Assert.InRange(Distance(strict.Snapshot(), loose.Snapshot()), 0, 1e-5);
+        using var loosest = new ExactFlowScheme { Tolerance = 1e-2 }.Begin(problem, start, WorkerTeam.Alone);
+        Assert.Null(loosest.Advance(0.3).Failure);
+        Assert.InRange(Distance(strict.Snapshot(), loosest.Snapshot()), 0, 1e-2);
     }
 }
