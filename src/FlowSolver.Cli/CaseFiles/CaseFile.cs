@@ -1,4 +1,5 @@
 using System.Text.Json.Nodes;
+using FlowSolver.Ensembles;
 using FlowSolver.Grids;
 using FlowSolver.Problems;
 using FlowSolver.Reporting;
@@ -41,6 +42,9 @@ public sealed record CaseFile
 
     /// <summary>Seed of the ensembles.</summary>
     public required ulong Seed { get; init; }
+
+    /// <summary>Options of those samplers that have any.</summary>
+    public required SamplerOptions SamplerOptions { get; init; }
 
     /// <summary>Units for axes and tables.</summary>
     public required CaseLabels Labels { get; init; }

@@ -1,5 +1,6 @@
 using System.Globalization;
 using System.Text;
+using FlowSolver.Ensembles;
 using FlowSolver.Formulas;
 using FlowSolver.Foundation;
 using FlowSolver.Grids;
@@ -97,6 +98,7 @@ public static class CaseFileReader
             var start = Start(constants, domain, grid);
             var plan = Plan();
             var methods = Methods();
+            var samplerOptions = SamplerOptions();
             if (constants is not null && potential is not null && start is not null)
             {
                 foreach (var name in constants.Keys.Where(name => !usedConstants.Contains(name)))
@@ -119,11 +121,32 @@ public static class CaseFileReader
                 Samplers = methods.Samplers,
                 Walkers = (int)values.Whole("ensemble.walkers")!.Value,
                 Seed = (ulong)values.Whole("ensemble.seed")!.Value,
+                SamplerOptions = samplerOptions,
                 Labels = new CaseLabels(values.Text("labels.length"), values.Text("labels.energy"), values.Text("labels.time")),
                 Tolerances = new CaseTolerances(values.Number("tolerances.dual_gap")!.Value),
                 ResolvedText = resolved.ToText(),
                 ResolvedValues = resolved.ToJson(),
                 Warnings = warnings,
+            };
+        }
+
+        private SamplerOptions SamplerOptions()
+        {
+            const string biasKey = "ensemble.gradient_bias";
+            const string exponentKey = "ensemble.decrease_exponent";
+            var bias = values.Find(biasKey) as double[] ?? new double[dimension];
+            if (bias.Length != dimension)
+                values.Fault(biasKey, CountMessage(bias.Length));
+            var exponent = values.Number(exponentKey) ?? 0.5;
+            if (exponent > 1)
+                values.Fault(exponentKey, string.Create(CultureInfo.InvariantCulture, $"The value was {exponent}; it must be at most 1."));
+            return new SamplerOptions
+            {
+                GradientBiasX = bias.Length > 0 ? bias[0] : 0,
+                GradientBiasY = bias.Length > 1 ? bias[1] : 0,
+                GradientVariance = values.Number("ensemble.gradient_variance") ?? 1,
+                StepsBeforeDecrease = values.Number("ensemble.decrease_after") ?? 10,
+                DecreaseExponent = exponent,
             };
         }
 

@@ -150,6 +150,14 @@ public static class CaseKeys
         new("ensemble.walkers", CaseValueKind.WholeNumber, "Walkers in each ensemble.", "100000") { Default = "100000", Least = 1, Most = CaseLimits.Walkers.Most },
         new("ensemble.seed", CaseValueKind.WholeNumber, "Seed of the random numbers: the same seed gives the same walkers.", "1")
             { Default = "1", Least = 0, Most = long.MaxValue },
+        new("ensemble.gradient_bias", CaseValueKind.NumberList, "Constant error of the gradient that ula-noisy-gradient uses, one number an axis.", "[0.1]")
+            { Unit = "energy/length" },
+        new("ensemble.gradient_variance", CaseValueKind.Number, "Variance of that gradient's random error on each axis.", "1.0")
+            { Unit = "(energy/length)^2", Default = "1.0", IsPositive = true },
+        new("ensemble.decrease_after", CaseValueKind.Number, "Steps n0 after which the steps of ula-decreasing begin to shrink: step n is taken in floor((1 + n/n0)^a) parts.", "10.0")
+            { Default = "10.0", IsPositive = true },
+        new("ensemble.decrease_exponent", CaseValueKind.Number, "The exponent a of that rule, above 0 and at most 1.", "0.5")
+            { Default = "0.5", IsPositive = true },
         new("tolerances.dual_gap", CaseValueKind.Number, "Largest duality gap of a certified step in two dimensions, relative to W2^2/(2 step); a step above it ends the method with status 3.", "1e-3")
             { Default = "1e-3", IsPositive = true },
         new("labels.length", CaseValueKind.Text, "Unit of length.", "\"µm\"") { Default = "\"\"" },

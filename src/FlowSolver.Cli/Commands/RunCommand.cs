@@ -43,7 +43,7 @@ internal static class RunCommand
         var options = new ComparisonOptions
         {
             Schemes = [.. read.Methods.Select(name => CaseMethods.Scheme(name, read))],
-            Samplers = [.. read.Samplers.Select(name => SamplerCatalogue.Find(name)!)],
+            Samplers = [.. read.Samplers.Select(name => SamplerCatalogue.Find(name, read.SamplerOptions)!)],
             Walkers = read.Walkers,
             Seed = seed ?? read.Seed,
             DrawsBounds = true,

@@ -81,6 +81,9 @@ public class CaseFileReaderTests
         samplers = []
         walkers = 100000
         seed = 9
+        gradient_variance = 1
+        decrease_after = 10
+        decrease_exponent = 0.5
         [tolerances]
         dual_gap = 1e-07
         [labels]
