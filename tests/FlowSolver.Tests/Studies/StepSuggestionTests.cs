@@ -12,8 +12,7 @@ namespace FlowSolver.Tests.Studies;
 public class StepSuggestionTests
 {
     /// <summary>
-    /// V = λx²/2 from equilibrium: the stationary bias is the larger one and known, √(T/λ)|√ratio − 1|; the step that makes it the bound, by bisection on that formula, is met within the 3 % that the search promises. Mutation tried:
-    /// equilibrium exchanged for the start in the stationary bias.
+    /// V = λx²/2 from equilibrium: the stationary bias is the larger one and known, √(T/λ)|√ratio − 1|; the step that makes it the bound, by bisection on that formula, is met within the 3 % that the search promises.
     /// </summary>
     [Theory]
     [InlineData("split-gradient")]
