@@ -148,8 +148,8 @@ public sealed class ChainSpectrum
         var modes = new double[rates.Length][];
         for (var k = 0; k < modes.Length; k++)
         {
-            modes[k] = closed ? RingMode(rates, k, modes) : OpenMode(rates[k]);
-            // Neighbours by a hair share digits between their modes; any basis of the two serves, as long as it is orthogonal.
+            modes[k] = closed ? RingMode(rates, k) : OpenMode(rates[k]);
+            // On a ring rates may be double, and neighbours by a hair share digits between their modes: any basis serves that is orthogonal.
             for (var j = 0; j < k; j++)
             {
                 if (Math.Abs(rates[j] - rates[k]) <= 1e-3 * rates[k])
@@ -209,8 +209,8 @@ public sealed class ChainSpectrum
         return mode;
     }
 
-    // Inverse iteration beside the rate, kept apart from modes of the same rate found before it: on a ring rates may be double.
-    private double[] RingMode(ReadOnlySpan<double> rates, int k, double[][] modes)
+    // Inverse iteration beside the rate.
+    private double[] RingMode(ReadOnlySpan<double> rates, int k)
     {
         var shift = rates[k] * (1 - 1e-9);
         var mode = new double[count];
@@ -219,12 +219,6 @@ public sealed class ChainSpectrum
         var (pivots, right) = (new double[count], new double[count]);
         for (var pass = 0; pass < 4; pass++)
         {
-            for (var j = 0; j < k; j++)
-            {
-                if (Math.Abs(rates[j] - rates[k]) <= 1e-3 * rates[k])
-                    RemoveShare(mode, modes[j]);
-            }
-
             RemoveMean(mode);
             SolveOnRing(shift, mode, pivots, right);
             RemoveMean(mode);

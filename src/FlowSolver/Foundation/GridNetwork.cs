@@ -71,6 +71,14 @@ public sealed class GridNetwork
     /// <summary>Whether nothing leads to ground, so that a constant is in the kernel.</summary>
     public bool IsFloating => SpanKernels.MaxAbs(Earth) == 0;
 
+    /// <summary>The same network with a conductance to ground of <paramref name="rate"/> times the weight added in every cell.</summary>
+    internal GridNetwork Grounded(double rate)
+    {
+        var ground = (double[])Earth.Clone();
+        SpanKernels.AddScaled(ground, rate, Mass);
+        return new GridNetwork(Nx, Ny, LinkX, LinkY, LinkUpRight, LinkUpLeft, ground, Mass, Ratio);
+    }
+
     /// <summary>Writes Ku for the cells of one row; differences first, so that a constant gives 0 to the last bit.</summary>
     internal void ApplyRow(ReadOnlySpan<double> u, int row, Span<double> target)
     {
@@ -199,22 +207,29 @@ public sealed class GridNetwork
         public bool MoveNext() => ++step < (network.LinkUpRight.Length > 0 ? 4 : 2);
     }
 
-    /// <summary>Diagonal of K.</summary>
+    /// <summary>
+    /// A diagonal D for Jacobi sweeps: that of K, and more where links are negative (as few are on coarser networks), so that all eigenvalues of D⁻¹K lie in [0, 2].
+    /// </summary>
     internal double[] Diagonal()
     {
-        var diagonal = (double[])Earth.Clone();
+        var sum = new double[Count];
+        var sizes = new double[Count];
         for (var cell = 0; cell < Count; cell++)
         {
             foreach (var (other, conductance) in LinksFrom(cell))
             {
                 if (other == cell)
                     continue;
-                diagonal[cell] += conductance;
-                diagonal[other] += conductance;
+                sum[cell] += conductance;
+                sum[other] += conductance;
+                sizes[cell] += Math.Abs(conductance);
+                sizes[other] += Math.Abs(conductance);
             }
         }
 
-        return diagonal;
+        for (var cell = 0; cell < Count; cell++)
+            sum[cell] = Math.Max(sum[cell] + Earth[cell], 0.5 * (sum[cell] + Earth[cell] + sizes[cell]));
+        return sum;
     }
 
     /// <summary>The direct solver of this network.</summary>

@@ -7,10 +7,12 @@ namespace FlowSolver.Foundation;
 /// A cell between two kept ones takes the value that lets the current through, links across being folded in; a cell between four takes that of its own
 /// equation. The coarse network is the one whose energy is that of interpolated fields, link by link:
 /// R. Alcouffe, A. Brandt, J. Dendy, J. Painter, SIAM J. Sci. Stat. Comput. 2 (1981) 430-454; J. Dendy, J. Comput. Phys. 48 (1982) 366-386 (both from memory).
-/// Weights that fall by many orders of magnitude over a few cells do no harm.
+/// Weights that fall by many orders of magnitude over a few cells do no harm: shares below one in fifty are dropped, or the light cells of a tail, each with a
+/// tiny share in heavy ones, would be driven to huge values to serve those.
 /// </remarks>
 internal sealed class NetworkCoarsening
 {
+    private const double LeastShare = 0.02;
     private readonly GridNetwork fine;
     private readonly bool halvesX;
     private readonly bool halvesY;
@@ -98,6 +100,10 @@ internal sealed class NetworkCoarsening
     private static (double, double) Split(double low, double high)
     {
         (low, high) = (Math.Max(low, 0), Math.Max(high, 0));
+        if (low < LeastShare * high)
+            low = 0;
+        if (high < LeastShare * low)
+            high = 0;
         return low + high > 0 ? (low / (low + high), high / (low + high)) : (1, 0);
     }
 
@@ -114,6 +120,13 @@ internal sealed class NetworkCoarsening
         sums[1] += Link(i, j, 1, -1);
         sums[2] += Link(i, j, -1, 1);
         sums[3] += Link(i, j, 1, 1);
+        var largest = Math.Max(Math.Max(sums[0], sums[1]), Math.Max(sums[2], sums[3]));
+        for (var corner = 0; corner < 4; corner++)
+        {
+            if (sums[corner] < LeastShare * largest)
+                sums[corner] = 0;
+        }
+
         var total = sums[0] + sums[1] + sums[2] + sums[3];
         var cell = j * fine.Nx + i;
         for (var corner = 0; corner < 4; corner++)

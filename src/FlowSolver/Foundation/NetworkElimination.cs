@@ -41,8 +41,9 @@ internal sealed class NetworkElimination
             var pivot = ground[i];
             foreach (var link in own)
                 pivot += link;
-            pivots[i] = pivot;
-            if (pivot == 0)
+            // Below this there is no conductance left to speak of, and shares of it would be noise.
+            pivots[i] = pivot > 1e-295 ? pivot : 0;
+            if (pivots[i] == 0)
                 continue;
             for (var a = 0; a < own.Length; a++)
             {

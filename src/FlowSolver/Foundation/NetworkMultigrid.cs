@@ -42,7 +42,7 @@ public sealed class NetworkMultigrid
         {
             var inverse = level.Diagonal();
             for (var i = 0; i < inverse.Length; i++)
-                inverse[i] = inverse[i] > 0 ? 1 / inverse[i] : 0;
+                inverse[i] = inverse[i] > 1e-290 ? 1 / inverse[i] : 0;
             inverseDiagonals.Add(inverse);
         }
 

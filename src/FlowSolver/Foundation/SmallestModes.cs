@@ -9,30 +9,38 @@ namespace FlowSolver.Foundation;
 /// <param name="Modes">u of each, Σ m u² = 1, positive where it carries most weight.</param>
 /// <param name="Residuals">√(Σ (Ku − λMu)²/m) of each: λ is off by at most its square over the distance to the other rates.</param>
 /// <param name="Iterations">Iterations on the finest network.</param>
-/// <param name="Converged">Whether every residual met its tolerance.</param>
+/// <param name="Converged">Whether every residual met its tolerance. Where not, rates may be NaN.</param>
 public sealed record NetworkModes(double[] Rates, double[][] Modes, double[] Residuals, int Iterations, bool Converged);
 
 /// <summary>The smallest eigenvalues and modes of a <see cref="GridNetwork"/> weighted by its cells.</summary>
 /// <remarks>
 /// Locally optimal block conjugate gradients (A. Knyazev, SIAM J. Sci. Comput. 23 (2001) 517-541) with a multigrid V-cycle, started on the coarsest network, where the
 /// cycle is a direct solution, and carried up network by network, so that few iterations are left on the finest. The constant is kept out by
-/// hand where nothing is grounded. Rates are formed as sums over links at the end, which keeps exponentially small ones.
+/// hand where nothing is grounded. The cycle is that of a network with a little ground everywhere: inverting exponentially small rates as they are would
+/// drown all other directions in rounding. Rates are formed as sums over links at the end, which keeps exponentially small ones, down to about
+/// 1e-28 of the rates within the wells.
 /// </remarks>
 public sealed class SmallestModes
 {
     private const int MostIterations = 80;
+    private readonly GridNetwork finest;
     private readonly NetworkMultigrid multigrid;
     private readonly WorkerTeam team;
+    private readonly bool floating;
     private readonly ConcurrentBag<NetworkMultigrid.Workspace> workspaces = [];
 
     /// <summary>Prepares.</summary>
-    /// <param name="multigrid">The networks.</param>
+    /// <param name="network">The network.</param>
+    /// <param name="shift">Conductance to ground of the preconditioner, per weight: a rate well below those of interest that are not exponentially small.</param>
     /// <param name="team">Threads to use; results do not depend on their number.</param>
-    public SmallestModes(NetworkMultigrid multigrid, WorkerTeam team)
+    /// <param name="coarsest">Largest number of cells on which the iteration starts.</param>
+    public SmallestModes(GridNetwork network, double shift, WorkerTeam team, int coarsest = 1100)
     {
-        ArgumentNullException.ThrowIfNull(multigrid);
+        ArgumentNullException.ThrowIfNull(network);
         ArgumentNullException.ThrowIfNull(team);
-        this.multigrid = multigrid;
+        finest = network;
+        multigrid = new NetworkMultigrid(network.Grounded(Require.NotNegative(shift)), coarsest);
+        floating = network.IsFloating;
         this.team = team;
     }
 
@@ -47,7 +55,7 @@ public sealed class SmallestModes
         var block = number + Math.Max(2, number / 4);
         block = Math.Min(block, coarsest.Count - 1);
         Require.That(number <= Math.Max(1, coarsest.Count / 4) && number <= block,
-            $"number was {number}; it must be at most {Math.Max(1, coarsest.Count / 4)} on a grid of {multigrid.Networks[0].Count} cells.");
+            $"number was {number}; it must be at most {Math.Max(1, coarsest.Count / 4)} on a grid of {finest.Count} cells.");
         var columns = new double[block][];
         for (var k = 0; k < block; k++)
             columns[k] = Start(coarsest, k);
@@ -112,7 +120,6 @@ public sealed class SmallestModes
         private readonly int number;
         private readonly double[] rates;
         private readonly double[] residuals;
-        private readonly bool floating;
         private readonly double total;
 
         public Level(SmallestModes owner, int index, double[][] modes, int number)
@@ -121,7 +128,7 @@ public sealed class SmallestModes
             this.index = index;
             this.modes = modes;
             this.number = number;
-            network = owner.multigrid.Networks[index];
+            network = index == 0 ? owner.finest : owner.multigrid.Networks[index];
             searches = new double[modes.Length][];
             steps = new double[modes.Length][];
             for (var k = 0; k < modes.Length; k++)
@@ -132,7 +139,6 @@ public sealed class SmallestModes
 
             rates = new double[modes.Length];
             residuals = new double[modes.Length];
-            floating = SpanKernels.MaxAbs(network.Earth) == 0;
             total = SpanKernels.Sum(network.Mass);
         }
 
@@ -157,7 +163,7 @@ public sealed class SmallestModes
                     converged &= k >= number || !active[k];
                 }
 
-                if (converged || iteration == MostIterations)
+                if (converged || iteration == MostIterations || double.IsNaN(last))
                     break;
                 iteration++;
                 // Searches and steps of the columns at work move to the front.
@@ -227,7 +233,7 @@ public sealed class SmallestModes
 
         private void RemoveMean(double[] values)
         {
-            if (!floating)
+            if (!owner.floating)
                 return;
             var mean = SpanKernels.Dot(network.Mass, values) / total;
             var vectors = MemoryMarshal.Cast<double, Vector512<double>>(values.AsSpan());
@@ -255,7 +261,7 @@ public sealed class SmallestModes
                     (largest, at) = (part, i);
             }
 
-            SpanKernels.Scale(values, Math.Sign(values[at]) / Math.Sqrt(MassSquare(values)));
+            SpanKernels.Scale(values, (values[at] < 0 ? -1 : 1) / Math.Sqrt(MassSquare(values)));
         }
 
         // Rayleigh-Ritz on the span of all modes, so many searches and so many steps; modes and steps are replaced.

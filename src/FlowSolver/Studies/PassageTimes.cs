@@ -12,7 +12,10 @@ namespace FlowSolver.Studies;
 /// </remarks>
 public static class PassageTimes
 {
-    /// <summary>Mean first passage time to a set of cells from every cell, in units of time.</summary>
+    /// <summary>
+    /// Mean first passage time to a set of cells from every cell, in units of time. In the plane NaN everywhere when barriers are so high (times of about 1e16 of
+    /// those within a well) that the solution loses its digits.
+    /// </summary>
     /// <param name="generator">The rates.</param>
     /// <param name="target">Whether each cell belongs to the set; length the cell count, at least one and not all.</param>
     /// <exception cref="ArgumentException">The set is empty or everything, or the length is wrong.</exception>
@@ -120,8 +123,9 @@ public static class PassageTimes
         var multigrid = new NetworkMultigrid(network, line ? int.MaxValue : 1100);
         if (line)
             multigrid.Apply(source, solution, multigrid.NewWorkspace());
-        else
-            multigrid.Solve(source, solution, 1e-12);
+        // Rounding may end the iteration before that tolerance; what is left is then judged.
+        else if (!(multigrid.Solve(source, solution, 1e-12).Error < 1e-4))
+            Array.Fill(solution, double.NaN);
         return solution;
     }
 }
@@ -137,13 +141,26 @@ internal static class GeneratorNetwork
         return masses;
     }
 
+    // The same with 0 below what a network can carry.
+    private static double[] CarriedMasses(Generator generator)
+    {
+        var masses = Masses(generator);
+        for (var i = 0; i < masses.Length; i++)
+        {
+            if (masses[i] < Nothing)
+                masses[i] = 0;
+        }
+
+        return masses;
+    }
+
     public static GridNetwork Of(Generator generator) => Grounded(generator, default, default);
 
     /// <summary>The network in which the cells of two sets are held at 0: their links lead to ground.</summary>
     public static GridNetwork Grounded(Generator generator, ReadOnlySpan<bool> first, ReadOnlySpan<bool> second)
     {
         var grid = generator.Grid;
-        var (count, masses) = (grid.CellCount, Masses(generator));
+        var (count, masses) = (grid.CellCount, grid.Y is null ? Masses(generator) : CarriedMasses(generator));
         var linkX = new double[count];
         var linkY = new double[grid.Y is null ? 0 : count];
         var ground = new double[count];
@@ -158,7 +175,7 @@ internal static class GeneratorNetwork
         for (var cell = 0; cell < count; cell++)
         {
             if (Holds(first, cell) || Holds(second, cell))
-                ground[cell] = Math.Max(masses[cell], 1e-300) * generator.ExitRate[cell];
+                ground[cell] = Math.Max(masses[cell], Nothing) * generator.ExitRate[cell];
         }
 
         return grid.Y is null
@@ -166,9 +183,15 @@ internal static class GeneratorNetwork
             : new GridNetwork(grid.Nx, grid.Ny, linkX, linkY, ground, masses, grid.Y.Width / grid.X.Width);
     }
 
+    // Links below it are cut: what lies behind them holds nothing, and products with shares on coarser networks would underflow.
+    private const double Nothing = 1e-200;
+
     // By the end that has more mass, whose rate is the small one: nothing underflows before it must.
     private static double Conductance(double[] masses, int cell, int neighbour, ReadOnlySpan<double> forward, ReadOnlySpan<double> back)
-        => masses[cell] >= masses[neighbour] ? masses[cell] * forward[cell] : masses[neighbour] * back[neighbour];
+    {
+        var conductance = masses[cell] >= masses[neighbour] ? masses[cell] * forward[cell] : masses[neighbour] * back[neighbour];
+        return conductance > Nothing ? conductance : 0;
+    }
 
     private static void Place(
         int cell, int neighbour, double conductance, double[] links, ReadOnlySpan<bool> first, ReadOnlySpan<bool> second, double[] ground)

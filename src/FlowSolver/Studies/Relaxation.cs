@@ -78,7 +78,7 @@ public sealed record RelaxationResult
     /// <summary>Diffusion over many turns of the periodic axes; null when there is none.</summary>
     public required DiffusionTensor? Diffusion { get; init; }
 
-    /// <summary>Decay of the exact flow beside the prediction; empty when not asked for.</summary>
+    /// <summary>Decay of the exact flow beside the prediction, as far as a few seconds of work lead; empty when not asked for.</summary>
     public required IReadOnlyList<DecayRow> Decay { get; init; }
 
     /// <summary>Warnings and failures.</summary>
@@ -93,6 +93,9 @@ public sealed record RelaxationResult
 /// </remarks>
 public static class Relaxation
 {
+    // Cells times products.
+    private const double MostDecayWork = 1.5e9;
+
     /// <summary>Runs the study.</summary>
     /// <param name="problem">The problem on its grid.</param>
     /// <param name="options">What is asked.</param>
@@ -115,7 +118,7 @@ public static class Relaxation
         var (rows, shapes) = Rows(problem, modes, coarse, start);
         cancellation.ThrowIfCancellationRequested();
         var kramers = KramersEstimate.Of(problem.Problem, Math.Clamp(Math.Max(problem.Grid.Nx, problem.Grid.Ny), 128, 1024));
-        var (passages, committor) = Passages(generator, kramers, options.MostWells, cancellation);
+        var (passages, committor) = Passages(generator, kramers, options.MostWells, remarks, cancellation);
         return new RelaxationResult
         {
             Problem = problem,
@@ -125,7 +128,7 @@ public static class Relaxation
             Passages = passages,
             Committor = committor,
             Diffusion = EffectiveDiffusion.Of(generator),
-            Decay = options.MeasureDecay ? Decay(problem, start, rows, team, cancellation) : [],
+            Decay = options.MeasureDecay ? Decay(generator, start, rows, team, cancellation) : [],
             Remarks = remarks,
         };
     }
@@ -144,8 +147,14 @@ public static class Relaxation
         Require.AtLeast(number, 1);
         Require.That(number <= generator.Grid.CellCount / 4,
             $"number of modes was {number}; it must be at most a quarter of the {generator.Grid.CellCount} cells.");
-        if (generator.Grid.Y is not null)
-            return new SmallestModes(new NetworkMultigrid(GeneratorNetwork.Of(generator)), team).Find(number, tolerance, cancellation);
+        if (generator.Grid.Y is { } axisY)
+        {
+            // A hundredth of the slowest rate of diffusion over the empty domain.
+            var (lengthX, lengthY) = (generator.Grid.X.Interval.Length, axisY.Interval.Length);
+            var shift = 0.01 * generator.Problem.Problem.Mobility * generator.Problem.Problem.Temperature * Math.PI * Math.PI / Math.Max(lengthX * lengthX, lengthY * lengthY);
+            return new SmallestModes(GeneratorNetwork.Of(generator), shift, team).Find(number, tolerance, cancellation);
+        }
+
         var count = generator.Grid.CellCount;
         var back = new double[count];
         for (var i = 0; i < count; i++)
@@ -192,7 +201,7 @@ public static class Relaxation
     }
 
     private static (List<PassageRow> Rows, double[]? Committor) Passages(
-        Generator generator, KramersResult kramers, int mostWells, CancellationToken cancellation)
+        Generator generator, KramersResult kramers, int mostWells, List<Remark> remarks, CancellationToken cancellation)
     {
         var rows = new List<PassageRow>();
         var wells = Math.Min(kramers.Wells.Count, mostWells);
@@ -212,6 +221,12 @@ public static class Relaxation
                     continue;
                 var time = onLine ? PassageTimes.BetweenPoints(generator, kramers.Wells[from].X, kramers.Wells[to].X)
                     : times is null ? 0 : times[CellOf(generator.Grid, kramers.Wells[from])];
+                if (!double.IsFinite(time))
+                {
+                    remarks.Add(new Remark(null, null, $"The time from well {from} to well {to} is so long that its solution lost all digits; it is left out.", false));
+                    continue;
+                }
+
                 var rates = kramers.Rows.Where(row => row.From == from && row.To == to).ToList();
                 rows.Add(new PassageRow(from, to, time, rates.Count == 0 ? null : 1 / rates.Sum(row => row.Rate)));
             }
@@ -279,21 +294,25 @@ public static class Relaxation
         }
     }
 
-    // Eight times, from a fifth of the slowest timescale that the start has a share in to four of them.
+    // Eight times, up to four of the slowest timescales that the start has a share in, and over a factor of twenty. In the plane the exact flow
+    // takes about √(30tΛ) products: over very long timescales it is followed only as far as some seconds of work lead.
     private static List<DecayRow> Decay(
-        GridProblem problem, Density start, List<ModeRow> modes, WorkerTeam team, CancellationToken cancellation)
+        Generator generator, Density start, List<ModeRow> modes, WorkerTeam team, CancellationToken cancellation)
     {
+        var problem = generator.Problem;
         var rows = new List<DecayRow>();
         var slowest = modes.Skip(1).FirstOrDefault(mode => Math.Abs(mode.StartShare) > 1e-6);
         if (slowest is null || !(slowest.Rate > 0))
             return rows;
+        var products = MostDecayWork / problem.Grid.CellCount;
+        var until = Math.Min(4 / slowest.Rate, problem.Grid.Y is null ? double.PositiveInfinity : products * products / (30 * generator.SpectralBound));
         using var run = new ExactFlowScheme().Begin(problem, start, team);
         var equilibrium = problem.Equilibrium.Values;
         var before = 0.0;
         for (var k = 0; k < 8; k++)
         {
             cancellation.ThrowIfCancellationRequested();
-            var time = 0.2 / slowest.Rate * Math.Pow(20, k / 7.0);
+            var time = until * Math.Pow(20, k / 7.0 - 1);
             if (run.Advance(time - before).Failure is not null)
                 break;
             var density = run.Snapshot().Values;

@@ -4,8 +4,8 @@ using MathNet.Numerics.LinearAlgebra;
 namespace FlowSolver.Tests.Foundation;
 
 /// <summary>
-/// Mutations tried and seen to fail: the value between four kept cells by its two neighbours along x alone (iterations); diagonal links of the coarse network left
-/// out; the shares of a joined column dropped from restriction; elimination without joining the neighbours; heaviest cell not held.
+/// Mutations tried and seen to fail: diagonal links of the coarse network left out; the shares of the column to the right dropped from restriction;
+/// elimination without joining the neighbours; the last cell held instead of the heaviest.
 /// </summary>
 public class NetworkMultigridTests
 {
@@ -97,7 +97,7 @@ public class NetworkMultigridTests
             // Against elimination on the whole grid, which never subtracts.
             var (u, exact) = (new double[f.Length], new double[f.Length]);
             var (iterations, error) = new NetworkMultigrid(network, 100).Solve(f, u, 1e-9, 100);
-            Assert.True(iterations <= 20, $"grounded {grounded}: {iterations} iterations, error {error:g3}");
+            Assert.True(iterations <= 9, $"grounded {grounded}: {iterations} iterations, error {error:g3}");
             var direct = new NetworkMultigrid(network, int.MaxValue);
             direct.Apply(f, exact, direct.NewWorkspace());
             if (!grounded)
@@ -189,14 +189,12 @@ public class NetworkMultigridTests
             var root = Vector<double>.Build.Dense(network.Count, i => Math.Sqrt(network.Weights[i]));
             var symmetric = Matrix<double>.Build.DiagonalOfDiagonalVector(1 / root) * Dense(network) * Matrix<double>.Build.DiagonalOfDiagonalVector(1 / root);
             var expected = symmetric.Evd(Symmetricity.Symmetric).EigenValues.Select(value => value.Real).Order().ToArray();
-            var multigrid = new NetworkMultigrid(network, 130);
-            Assert.True(multigrid.Networks.Count >= 2);
-            var found = new SmallestModes(multigrid, WorkerTeam.Alone).Find(8);
+            var found = new SmallestModes(network, 1e-3, WorkerTeam.Alone, 130).Find(8);
             Assert.True(found.Converged);
             for (var k = 0; k < 8; k++)
                 Assert.Equal(1, found.Rates[k] / expected[k + 1], 1e-9);
             using var team = new WorkerTeam(3);
-            Assert.Equal(found.Rates, new SmallestModes(multigrid, team).Find(8).Rates);
+            Assert.Equal(found.Rates, new SmallestModes(network, 1e-3, team, 130).Find(8).Rates);
         }
     }
 

@@ -8,8 +8,8 @@ using FlowSolver.Tests.Support;
 namespace FlowSolver.Tests.Studies;
 
 /// <summary>
-/// Mutations tried and seen to fail: links of the second axis left out of the network; time to a set with the set's own mass as source; committor with the two sets
-/// exchanged; the second pass of the network of wells ignored; shares of the start taken without the cell's volume; the effective diffusion without its corrector.
+/// Mutations tried and seen to fail: links of the second axis halved; time to a set with the source off by a hundredth; committor with the two sets exchanged; the second
+/// pass of the network of wells ignored; shares of the start taken without the cell's volume; the effective diffusion without its corrector.
 /// </summary>
 public class RelaxationTests
 {
@@ -93,6 +93,22 @@ public class RelaxationTests
         Assert.Equal(result.Modes[1].Rate, result.Decay[^1].MeasuredRate!.Value, 1e-6 * result.Modes[1].Rate);
         Assert.All(result.Decay, row => Assert.True(row.Measured >= row.Predicted * (1 - 1e-6)));
         Assert.Null(result.Diffusion);
+    }
+
+    /// <summary>V/T up to 1000: equilibrium underflows in the corners, which must not reach the modes of the wells.</summary>
+    [Fact]
+    public void FindModes_EquilibriumUnderflows_StillFindsTheWells()
+    {
+        var generator = new Generator(Plane(0.01, 200, 200));
+        Assert.Contains(generator.Problem.Equilibrium.Values, value => value < 1e-290);
+        var found = Relaxation.FindModes(generator, 4, 1e-5, WorkerTeam.Alone);
+        Assert.True(found.Converged);
+        var kramers = KramersEstimate.Of(generator.Problem.Problem);
+        Assert.InRange(found.Rates[0] / kramers.SlowRates[0], 0.95, 1);
+        // The next ones are those of a parabola: at the pass M times its negative curvature, and in each of the two wells M times the smaller one.
+        Assert.InRange(found.Rates[1] / (-1.4 * kramers.Passes[0].LowCurvature), 0.93, 1.02);
+        Assert.InRange(found.Rates[2] / (1.4 * kramers.Wells[0].LowCurvature), 0.93, 1.02);
+        Assert.Equal(1, found.Rates[3] / found.Rates[2], 1e-6);
     }
 
     [Fact]
@@ -203,6 +219,8 @@ public class RelaxationTests
         Assert.Equal(3, kramers.Passes.Count);
         Assert.Equal(6, kramers.Rows.Count);
         Assert.Equal(3, kramers.SlowRates.Count);
+        // The trace of the jump process, one of whose rates is 0.
+        Assert.Equal(1, kramers.SlowRates.Sum() / kramers.Rows.Sum(row => row.Rate), 1e-12);
         var rates = Relaxation.FindModes(new Generator(new GridProblem(problem, new Grid(new Axis(interval, 900)))), 4, 1e-6, WorkerTeam.Alone).Rates;
         for (var k = 0; k < 3; k++)
             Assert.InRange(rates[k] / kramers.SlowRates[k], 0.8, 1.05);

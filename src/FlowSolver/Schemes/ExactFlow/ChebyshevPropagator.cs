@@ -19,9 +19,9 @@ internal sealed unsafe class ChebyshevPropagator
 {
     private const int Lane = 8;
     private const int Margin = 8;
-    // Eight levels a pass leave memory far behind arithmetic; the cache share is most of a core's second level.
-    private const int MostLevels = 8;
-    private const double CacheShare = 800e3;
+    // So many levels a pass leave memory behind arithmetic; the cache share is most of a core's second level.
+    private const int MostLevels = 16;
+    private const double CacheShare = 600e3;
     private readonly Generator generator;
     private readonly WorkerTeam team;
     private readonly int nx;
@@ -71,13 +71,13 @@ internal sealed unsafe class ChebyshevPropagator
         periodicY = grid.Y is { IsPeriodic: true };
         vectors = (nx + Lane - 1) / Lane;
         stride = vectors * Lane + 2 * Margin;
-        // Very wide rows are also cut along x, each level a vector further to the left, so that all levels still fit the cache; across the seam
-        // of a periodic axis that does not work, and fewer levels must do.
-        var levelsThatFit = (int)(CacheShare / (2.0 * 8 * sizeof(double) * stride));
-        mostLevels = Math.Clamp(Math.Min(periodicX ? levelsThatFit : MostLevels, ny / 4), 1, MostLevels);
-        var chunk = (int)(CacheShare / (2.0 * 8 * sizeof(double) * mostLevels)) - Lane * mostLevels;
-        chunkWidth = periodicX || vectors * Lane <= chunk + chunk / 2 ? vectors * Lane : chunk / Lane * Lane;
-        var blocks = Math.Max(1, Math.Max(Math.Min(4, ny / (4 * mostLevels)), ny / 128));
+        // Rows in the cache at once: one a level and two more. Wide rows are cut along x, each level a vector further to the left, so that all levels
+        // fit; across the seam of a periodic axis that does not work, and fewer levels must do.
+        var rowsThatFit = (int)(CacheShare / (8.0 * sizeof(double) * stride));
+        mostLevels = Math.Clamp(Math.Min(periodicX ? rowsThatFit - 2 : MostLevels, ny / 4), 1, MostLevels);
+        var chunk = (int)(CacheShare / (8.0 * sizeof(double) * (mostLevels + 2))) - Lane * mostLevels;
+        chunkWidth = periodicX || vectors * Lane <= chunk + chunk / 4 ? vectors * Lane : chunk / Lane * Lane;
+        var blocks = Math.Max(1, Math.Max(Math.Min(4, ny / (4 * mostLevels)), ny / 192));
         blockStart = new int[blocks + 1];
         for (var b = 0; b <= blocks; b++)
             blockStart[b] = (int)((long)ny * b / blocks);
@@ -266,7 +266,7 @@ internal sealed unsafe class ChebyshevPropagator
         }
     }
 
-    // What the blocks left out around the row where block begins.
+    // What the blocks left out around the row where block begins, in the same order: each level one row behind the one before.
     private void SeamLevels(int block)
     {
         if (block == 0 && !periodicY)
@@ -274,10 +274,14 @@ internal sealed unsafe class ChebyshevPropagator
         var seam = blockStart[block];
         for (var chunk = 0; chunk < vectors * Lane; chunk += chunkWidth)
         {
-            for (var k = 2; k <= levels; k++)
+            for (var front = seam; front < seam + 2 * (levels - 1); front++)
             {
-                for (var row = seam - (k - 1); row < seam + (k - 1); row++)
-                    NextLevel(row < 0 ? row + ny : row, k, chunk, Math.Min(seam + k, ny - 1));
+                for (var k = 2; k <= levels; k++)
+                {
+                    var row = front - (k - 1);
+                    if (row >= seam - (k - 1) && row < seam + (k - 1))
+                        NextLevel(row < 0 ? row + ny : row, k, chunk, Math.Min(front, ny - 1));
+                }
             }
         }
     }
